@@ -111,8 +111,8 @@ impl Band {
         faults
     }
 
-    /// Unit that a flux column may have; empty, because any linear unit will do for a matching zero point.
-    const FLUX_UNIT: &'static str = "";
+    /// A flux column may have any linear unit: the zero point belongs to it.
+    const FLUX_UNIT: &'static str = crate::frame::unit::ANY;
 }
 
 /// Word of the UCD that says which part of the spectrum a band of this name is; the optical as a whole when unknown.

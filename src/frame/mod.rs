@@ -3,5 +3,6 @@
 //! Inside kernels every value is an `f64` and NaN means missing; the edges turn NaN into Arrow nulls and back.
 
 mod declare;
+pub mod unit;
 
 pub use declare::{Declared, Type};
