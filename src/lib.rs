@@ -8,5 +8,8 @@
 //! PURE: no files, no Arrow, no logging; slices in, slices out. catalogue, verdicts, release, tables and mock never
 //! import each other; engine hands data on.
 
+pub mod catalogue;
+pub mod columnar;
 pub mod error;
 pub mod frame;
+pub mod release;
