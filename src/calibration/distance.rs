@@ -18,6 +18,11 @@ use serde::{Deserialize, Serialize};
 pub struct Settings(pub Prior);
 
 impl Settings {
+    /// The prior.
+    pub fn prior(&self) -> &Prior {
+        &self.0
+    }
+
     pub(super) fn check(&self) -> Vec<(String, String)> {
         self.0.check().err().map(|(key, text)| (format!("distance.{key}"), text)).into_iter().collect()
     }

@@ -1,0 +1,3 @@
+//! PURE. Magnitudes and moduli, exact sums, special functions.
+
+pub mod magnitude;
