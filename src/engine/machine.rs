@@ -64,7 +64,7 @@ pub fn parse_size(text: &str) -> Result<u64> {
         _ => f64::NAN,
     };
     let bytes = digits.parse::<f64>().unwrap_or(f64::NAN) * factor;
-    if bytes >= 1.0 && bytes < 1e18 {
+    if (1.0..1e18).contains(&bytes) {
         return Ok(bytes as u64);
     }
     Err(Error::plan(format!("`{text}` is no size; write it like 2GiB, 600MiB or 1500MB")))

@@ -8,7 +8,8 @@ use crate::columnar::source::SourceFile;
 use crate::error::{Error, Result};
 use crate::release::{ENCODE_ROWS, EncodedPiece, PieceEncoder};
 use crate::tables;
-use crate::verdicts::{BatchVerdict, CutCounts, statistics};
+use crate::verdicts::statistics::{self, Verdict};
+use crate::verdicts::{BatchVerdict, CutCounts};
 use arrow::array::{Array, ArrayRef, BooleanArray, RecordBatch, RecordBatchOptions};
 use arrow::compute::filter_record_batch;
 use arrow::datatypes::{Field, Schema};
@@ -79,8 +80,8 @@ fn compute(job: &Job, piece: &Piece, source: &Arc<SourceFile>) -> Result<Made> {
     let mut encoder = if copied { layout.encoder()? } else { layout.encoder_of_all()? };
     let mut tally = Tally::new(job);
     let decided = decide(job, piece, source);
-    if let Some(fails) = all_dropped(job, &decided) {
-        tally.cuts.book_many(piece.rows, mask(&job.cut_groups[0]), fails, 0);
+    if let Some((fails, missing)) = all_dropped(job, &decided) {
+        tally.cuts.book_many(piece.rows, mask(&job.cut_groups[0]), fails, missing);
         return Ok(Made { encoded: encoder.finish()?, copied, tally });
     }
 
@@ -99,23 +100,26 @@ fn compute(job: &Job, piece: &Piece, source: &Arc<SourceFile>) -> Result<Made> {
 }
 
 /// What row-group statistics prove of each cut on catalogue columns.
-fn decide(job: &Job, piece: &Piece, source: &SourceFile) -> Vec<Option<bool>> {
+fn decide(job: &Job, piece: &Piece, source: &SourceFile) -> Vec<Option<Verdict>> {
     let mut decided = vec![None; job.cuts.len()];
     let group = source.metadata().row_group(piece.row_group);
     for cut in &job.cut_groups[0] {
-        decided[*cut] = statistics::decide(job.cuts.condition(*cut), group, source.schema());
+        decided[*cut] = statistics::decide(job.cuts.condition(*cut), group);
     }
     decided
 }
 
-/// The cuts that every row fails, when all cuts on catalogue columns are decided and one of them drops the rows.
-fn all_dropped(job: &Job, decided: &[Option<bool>]) -> Option<u32> {
+/// The cuts that every row fails and those of them that miss a value, when all cuts on catalogue columns are decided and
+/// one of them drops the rows.
+fn all_dropped(job: &Job, decided: &[Option<Verdict>]) -> Option<(u32, u32)> {
     let first = &job.cut_groups[0];
     if !first.iter().all(|cut| decided[*cut].is_some()) {
         return None;
     }
-    let fails = mask(first.iter().filter(|cut| decided[**cut] == Some(false)));
-    (fails & job.cuts.dropping() != 0).then_some(fails)
+    let those = |verdict| mask(first.iter().filter(|cut| decided[**cut] == Some(verdict)));
+    let missing = those(Verdict::AllMissing);
+    let fails = those(Verdict::AllFail) | missing;
+    (fails & job.cuts.dropping() != 0).then_some((fails, missing))
 }
 
 fn mask<'a>(cuts: impl IntoIterator<Item = &'a usize>) -> u32 {
@@ -144,7 +148,7 @@ fn refuse_null_id(batch: &RecordBatch, id: &str, first_row: u64) -> Result<()> {
 }
 
 /// Columns to decode: all of them in file order when they are encoded again, else those that something needs.
-fn wanted(job: &Job, source: &SourceFile, decided: &[Option<bool>], copied: bool, check_ids: bool) -> Vec<String> {
+fn wanted(job: &Job, source: &SourceFile, decided: &[Option<Verdict>], copied: bool, check_ids: bool) -> Vec<String> {
     if !copied {
         return source.schema().fields().iter().map(|field| field.name().clone()).collect();
     }
@@ -165,7 +169,7 @@ fn chunk(
     job: &Job,
     mut batch: RecordBatch,
     pass_through: usize,
-    decided: &[Option<bool>],
+    decided: &[Option<Verdict>],
     encoder: &mut PieceEncoder<'_>,
     tally: &mut Tally,
 ) -> Result<()> {
@@ -182,7 +186,7 @@ fn chunk(
         }
         for cut in &job.cut_groups[stage] {
             match decided[*cut] {
-                Some(keep) => verdict.apply_to_all(*cut, keep),
+                Some(all) => verdict.apply_to_all(*cut, all),
                 None => {
                     let view = view(job, &batch, job.cuts.columns(*cut), &mut |output| {
                         published[output].get_or_insert_with(|| numbers.published(output)).clone()

@@ -7,7 +7,6 @@
 
 use crate::error::{Error, suggestion};
 use serde_json::Value;
-use toml::Spanned;
 use toml::de::{DeTable, DeValue};
 
 /// Faults of `text` as a document under `schema`; empty when deserialisation will succeed.

@@ -12,6 +12,7 @@ use std::fs::{File, OpenOptions, TryLockError};
 use std::io::Write;
 use std::path::{Path, PathBuf};
 
+use schemars::JsonSchema;
 use serde::{Deserialize, Serialize};
 
 use super::manifest::PartRecord;
@@ -26,7 +27,7 @@ const FORMAT: &str = "tenparsec ledger";
 const REVISION: u32 = 1;
 
 /// First line: what the parts were built from. A build continues only a ledger with an equal header.
-#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, JsonSchema)]
 pub struct LedgerHeader {
     /// Always "tenparsec ledger".
     pub format: String,
@@ -57,7 +58,7 @@ impl LedgerHeader {
 }
 
 /// A further line: a finished part and what the engine wants to know again (counts, accumulators).
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize, JsonSchema)]
 pub struct LedgerEntry {
     /// Position of the part in the build.
     pub index: u64,
