@@ -3,6 +3,7 @@
 use std::fs::File;
 use std::io::Write;
 use std::path::{Path, PathBuf};
+use std::sync::Arc;
 
 use parquet::file::writer::SerializedFileWriter;
 
@@ -20,8 +21,8 @@ use crate::error::{Error, Result};
 const BUFFER: usize = 1 << 20;
 
 /// A part in the making. Dropped before [`PartWriter::finish`], it removes its temporary file.
-pub struct PartWriter<'a> {
-    layout: &'a Layout,
+pub struct PartWriter {
+    layout: Arc<Layout>,
     name: String,
     target: PathBuf,
     temporary: PathBuf,
@@ -31,14 +32,22 @@ pub struct PartWriter<'a> {
     rows_in: u64,
 }
 
-impl<'a> PartWriter<'a> {
+impl PartWriter {
     /// Begins part `name` in the folder `dir` (the release's `catalogue`); `first_row` is the first row it reads, counted in the input file.
-    pub fn create(dir: &Path, name: &str, layout: &'a Layout, first_row: u64) -> Result<Self> {
+    pub fn create(dir: &Path, name: &str, layout: &Arc<Layout>, first_row: u64) -> Result<Self> {
         let target = dir.join(name);
         let temporary = unfinished_part(dir, name);
         let file = File::create(&temporary).map_err(|error| write_error(&target, &error))?;
-        let mut part =
-            Self { layout, name: name.to_owned(), target, temporary, writer: None, first_row, rows: 0, rows_in: 0 };
+        let mut part = Self {
+            layout: layout.clone(),
+            name: name.to_owned(),
+            target,
+            temporary,
+            writer: None,
+            first_row,
+            rows: 0,
+            rows_in: 0,
+        };
         let sink = HashingFile::new(file);
         let writer = SerializedFileWriter::new(sink, layout.root.clone(), layout.properties.clone());
         part.writer = Some(writer.map_err(|error| part.failed(error))?);
@@ -132,7 +141,7 @@ impl<'a> PartWriter<'a> {
     }
 }
 
-impl Drop for PartWriter<'_> {
+impl Drop for PartWriter {
     fn drop(&mut self) {
         // after a successful finish the name is gone already; a leftover would only cost space
         let _ = std::fs::remove_file(&self.temporary);
