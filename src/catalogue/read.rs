@@ -1,6 +1,6 @@
 //! Decodes a piece: named columns only, batch by batch, pages as they come.
 //!
-//! Page checksums are verified where a page has one. A damaged page gives an error with file, row group and, found by
+//! Before the first batch the page headers are walked (see `columnar::pages`). Page checksums are verified where a page has one. A damaged page gives an error with file, row group and, found by
 //! decoding the columns one at a time, the column. A column chunk that ends early is an error too, never a short read.
 
 use std::sync::Arc;
@@ -13,7 +13,7 @@ use parquet::arrow::arrow_reader::{
 
 use super::Piece;
 use crate::columnar::guard::{guard, parquet_error};
-use crate::columnar::source::SourceFile;
+use crate::columnar::source::{SourceFile, check_pages};
 use crate::error::{Error, Result};
 
 /// Iterator over the batches of a piece; ends after the first error.
@@ -26,6 +26,8 @@ pub struct PieceReader {
     batch_rows: usize,
     inner: Option<ParquetRecordBatchReader>,
     given: u64,
+    /// Leaf columns whose pages are still to be walked before the first batch.
+    unchecked: Vec<usize>,
 }
 
 /// Reads `columns` (root columns; batches have them in the order asked) of `piece` in batches of `batch_rows` rows.
@@ -57,7 +59,13 @@ pub fn read(source: &Arc<SourceFile>, piece: &Piece, columns: &[String], batch_r
         batch_rows,
         inner: Some(inner),
         given: 0,
+        unchecked: leaves(source, &in_file),
     })
+}
+
+fn leaves(source: &SourceFile, roots: &[usize]) -> Vec<usize> {
+    let schema = source.metadata().file_metadata().schema_descr();
+    (0..schema.num_columns()).filter(|leaf| roots.binary_search(&schema.get_column_root_idx(*leaf)).is_ok()).collect()
 }
 
 fn decoder(source: &SourceFile, piece: &Piece, roots: &[usize], batch_rows: usize) -> Result<ParquetRecordBatchReader> {
@@ -86,6 +94,11 @@ fn decoder(source: &SourceFile, piece: &Piece, roots: &[usize], batch_rows: usiz
 
 impl PieceReader {
     fn next_batch(&mut self) -> Result<Option<RecordBatch>> {
+        for leaf in std::mem::take(&mut self.unchecked) {
+            let chunk = self.source.metadata().row_group(self.piece.row_group).column(leaf);
+            check_pages(self.source.reader(), chunk, false)
+                .map_err(|error| error.in_column(chunk.column_path().string()))?;
+        }
         let Some(inner) = self.inner.as_mut() else { return Ok(None) };
         match guard(|| inner.next().transpose().map_err(|error| parquet_error(error.into()))) {
             Ok(Some(batch)) => {

@@ -25,7 +25,7 @@ use parquet::file::page_index::offset_index::OffsetIndexMetaData;
 
 use super::compact::Compact;
 use super::guard::{guard, io_reason, parquet_error};
-pub use super::pages::{PageSizes, page_sizes};
+pub use super::pages::check_pages;
 pub use super::pread::{Pread, PreadFrom};
 use crate::error::{Error, Result};
 

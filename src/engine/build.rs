@@ -166,7 +166,7 @@ impl Work for Build<'_> {
         let plan = &self.job.parts[part];
         let layout = self.job.layout(plan.file)?;
         let first_row = plan.pieces.first().map_or(0, |piece| piece.first_row_in_file);
-        let writer = PartWriter::create(&self.parts_folder, &plan.name, layout, first_row)?;
+        let writer = PartWriter::create(&self.parts_folder, &plan.name, &layout, first_row)?;
         Ok(Open { writer, tally: Tally::new(self.job), next_piece: 0 })
     }
 

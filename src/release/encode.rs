@@ -21,8 +21,8 @@ use crate::error::{Error, Result};
 pub const ENCODE_ROWS: usize = 16_384;
 
 /// Encoder of one piece; made by a [`super::Layout`].
-pub struct PieceEncoder<'a> {
-    shape: &'a Shape,
+pub struct PieceEncoder {
+    shape: Arc<Shape>,
     writers: Vec<ArrowColumnWriter>,
     /// Slices of each column that wait for the rest of their group.
     waiting: Vec<Vec<ArrayRef>>,
@@ -43,11 +43,11 @@ pub struct EncodedPiece {
     pub(super) whole_rows: bool,
 }
 
-impl<'a> PieceEncoder<'a> {
-    pub(super) fn new(shape: &'a Shape) -> Result<Self> {
+impl PieceEncoder {
+    pub(super) fn new(shape: &Arc<Shape>) -> Result<Self> {
         let columns = shape.fields.len();
         Ok(Self {
-            shape,
+            shape: shape.clone(),
             writers: shape.factory.create_column_writers(0).map_err(parquet_error)?,
             waiting: vec![Vec::new(); columns],
             waiting_rows: 0,
@@ -187,5 +187,5 @@ const _: fn() = || {
     shared_by_threads::<super::Layout>();
     fn sent_to_threads<T: Send>() {}
     sent_to_threads::<EncodedPiece>();
-    sent_to_threads::<Arc<Shape>>();
+    sent_to_threads::<PieceEncoder>();
 };

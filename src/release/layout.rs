@@ -49,8 +49,8 @@ pub struct Layout {
     pub(super) input: String,
     pub(super) input_fingerprint: String,
     schema: SchemaRef,
-    computed: Shape,
-    all: Option<Shape>,
+    computed: Arc<Shape>,
+    all: Option<Arc<Shape>>,
 }
 
 /// Columns of an encoder with the factory of their writers.
@@ -157,7 +157,7 @@ impl Layout {
                 let fields: Fields = own.iter().chain(&computed).cloned().collect();
                 let shape = Shape::new(root.clone(), fields, &properties, true)?;
                 shape.try_out()?;
-                Some(shape)
+                Some(Arc::new(shape))
             }
         };
         let new_root = group(input.root_schema().name(), new_nodes.root_schema().get_fields().to_vec())?;
@@ -165,7 +165,7 @@ impl Layout {
             input_leaves: input.num_columns(),
             input: source.shown.clone(),
             input_fingerprint: source.fingerprint.clone(),
-            computed: Shape::new(new_root, computed, &properties, false)?,
+            computed: Arc::new(Shape::new(new_root, computed, &properties, false)?),
             root,
             properties,
             schema,
@@ -179,13 +179,13 @@ impl Layout {
     }
 
     /// Encoder of the computed columns of one piece, to be written beside copied chunks.
-    pub fn encoder(&self) -> Result<PieceEncoder<'_>> {
+    pub fn encoder(&self) -> Result<PieceEncoder> {
         PieceEncoder::new(&self.computed)
     }
 
     /// Encoder of all columns of one piece: the input's root columns in order, with the types of
     /// [`SourceFile::schema`], then the computed ones. Needs [`PassThrough::Encoded`].
-    pub fn encoder_of_all(&self) -> Result<PieceEncoder<'_>> {
+    pub fn encoder_of_all(&self) -> Result<PieceEncoder> {
         let shape = self.all.as_ref().ok_or_else(|| {
             Error::failed("The layout was made for copied columns only; this is a defect of tenparsec.")
                 .in_file(&self.input)

@@ -9,7 +9,7 @@
 
 use std::collections::BTreeMap;
 use std::fs::{File, OpenOptions, TryLockError};
-use std::io::Write;
+use std::io::{BufRead, BufReader, Read, Write};
 use std::path::{Path, PathBuf};
 
 use schemars::JsonSchema;
@@ -25,6 +25,8 @@ use crate::error::{Error, Result};
 pub(super) const FILE: &str = "ledger.jsonl";
 const FORMAT: &str = "tenparsec ledger";
 const REVISION: u32 = 1;
+/// No header of ours is longer.
+const MAX_HEADER: u64 = 64 << 10;
 
 /// First line: what the parts were built from. A build continues only a ledger with an equal header.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize, Deserialize, JsonSchema)]
@@ -167,7 +169,12 @@ impl Ledger {
         let mut line = serde_json::to_vec(value)
             .map_err(|error| Error::failed(format!("A ledger line cannot be written as JSON: {error}.")))?;
         line.push(b'\n');
+        let before = self.file.metadata().map(|found| found.len());
         let written = self.file.write_all(&line).and_then(|()| self.file.sync_data());
+        if let (Err(_), Ok(len)) = (&written, before) {
+            // half a line must not be continued by the next one; if this fails too, resume sees a damaged line
+            let _ = self.file.set_len(len);
+        }
         written.map_err(|error| write_error(&self.path, &error))
     }
 
@@ -179,11 +186,10 @@ impl Ledger {
 
 /// Is the first line of this file a header of ours?
 pub(super) fn is_ledger(path: &Path) -> bool {
+    let mut first = String::new();
+    let read = File::open(path).and_then(|file| BufReader::new(file.take(MAX_HEADER)).read_line(&mut first));
     // an empty file under this name is what a power cut between creation and first line leaves
-    std::fs::read(path).is_ok_and(|text| {
-        let first = text.split(|byte| *byte == b'\n').next().unwrap_or_default();
-        first.is_empty() || serde_json::from_slice::<LedgerHeader>(first).is_ok_and(|header| header.format == FORMAT)
-    })
+    read.is_ok() && (first.is_empty() || serde_json::from_str::<LedgerHeader>(&first).is_ok_and(|h| h.format == FORMAT))
 }
 
 /// Parts named by a ledger, as far as its lines can be read.

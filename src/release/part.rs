@@ -34,14 +34,22 @@ pub struct PartWriter {
 
 impl PartWriter {
     /// Begins part `name` in the folder `dir` (the release's `catalogue`); `first_row` is the first row it reads, counted in the input file.
-    pub fn create(dir: &Path, name: &str, layout: Arc<Layout>, first_row: u64) -> Result<Self> {
+    pub fn create(dir: &Path, name: &str, layout: &Arc<Layout>, first_row: u64) -> Result<Self> {
         let target = dir.join(name);
         let temporary = unfinished_part(dir, name);
         let file = File::create(&temporary).map_err(|error| write_error(&target, &error))?;
-        let mut part =
-            Self { layout, name: name.to_owned(), target, temporary, writer: None, first_row, rows: 0, rows_in: 0 };
+        let mut part = Self {
+            layout: layout.clone(),
+            name: name.to_owned(),
+            target,
+            temporary,
+            writer: None,
+            first_row,
+            rows: 0,
+            rows_in: 0,
+        };
         let sink = HashingFile::new(file);
-        let writer = SerializedFileWriter::new(sink, part.layout.root.clone(), part.layout.properties.clone());
+        let writer = SerializedFileWriter::new(sink, layout.root.clone(), layout.properties.clone());
         part.writer = Some(writer.map_err(|error| part.failed(error))?);
         Ok(part)
     }

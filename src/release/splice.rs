@@ -20,8 +20,8 @@ use parquet::file::reader::{ChunkReader, Length};
 use parquet::file::statistics::Statistics;
 use parquet::file::writer::SerializedRowGroupWriter;
 
-use crate::columnar::guard::{guard, io_reason, parquet_error};
-use crate::columnar::source::{PageIndexes, PageSizes, Pread, SourceFile, page_sizes};
+use crate::columnar::guard::{guard, parquet_error};
+use crate::columnar::source::{PageIndexes, Pread, SourceFile, check_pages};
 use crate::error::{Error, Result};
 
 /// Chunks pass through a buffer of this many bytes.
@@ -40,7 +40,7 @@ pub(super) fn splice<W: std::io::Write + Send>(
     let chunk = group.column(leaf);
     let place =
         |error: Error| error.in_file(&source.shown).in_row_group(row_group).in_column(chunk.column_path().string());
-    verify_pages(source.reader(), chunk).map_err(place)?;
+    check_pages(source.reader(), chunk, true).map_err(place)?;
     let (start, len) = chunk.byte_range();
     let bounds_hold = bounds_hold(metadata, leaf, chunk);
     let bloom_filter = guard(|| Sbbf::read_from_column_chunk(chunk, source.reader()).map_err(parquet_error));
@@ -94,46 +94,6 @@ pub(super) fn counts(kind: Type, distinct: Option<u64>, nulls: Option<u64>) -> S
         Type::BYTE_ARRAY => Statistics::byte_array(None, None, distinct, nulls, false),
         Type::FIXED_LEN_BYTE_ARRAY => Statistics::fixed_len_byte_array(None, None, distinct, nulls, false),
     }
-}
-
-/// Walks the page headers of a chunk until its values are complete.
-fn verify_pages(reader: &Pread, chunk: &ColumnChunkMetaData) -> Result<()> {
-    let (start, len) = chunk.byte_range();
-    let damaged = |text: String| Error::failed(format!("The column's data are damaged: {text}."));
-    let wanted = u64::try_from(chunk.num_values()).unwrap_or(0);
-    let (mut at, end, mut values) = (start, start + len, 0u64);
-    while values < wanted {
-        let PageSizes { header, body, checksum, values: more } = page_sizes(reader, at, end)?.ok_or_else(|| {
-            damaged(format!("there is no page header at offset {at}, after {values} of {wanted} values"))
-        })?;
-        let body_start = at + header;
-        at = body_start + body;
-        if at > end {
-            return Err(damaged(format!("a page of {body} bytes at offset {body_start} reaches beyond its chunk")));
-        }
-        if let Some(stated) = checksum {
-            let mut hasher = crc32fast::Hasher::new();
-            let mut input = reader.range(body_start, body, BUFFER.min(body.max(1) as usize));
-            loop {
-                use std::io::BufRead;
-                let piece = input.fill_buf().map_err(|error| damaged(io_reason(&error)))?;
-                if piece.is_empty() {
-                    break;
-                }
-                hasher.update(piece);
-                let used = piece.len();
-                input.consume(used);
-            }
-            if hasher.finalize() != stated {
-                return Err(damaged(format!("the page at offset {body_start} does not match its checksum")));
-            }
-        }
-        values = values.saturating_add(more);
-    }
-    if values > wanted {
-        return Err(damaged(format!("its pages hold {values} values, the footer claims {wanted}")));
-    }
-    Ok(())
 }
 
 /// The input file up to the end of one chunk, so that read-ahead stops there.
