@@ -8,5 +8,9 @@
 //! PURE: no files, no Arrow, no logging; slices in, slices out. catalogue, verdicts, release, tables and mock never
 //! import each other; engine hands data on.
 
+pub mod columnar;
 pub mod error;
 pub mod frame;
+pub mod numerics;
+pub mod plan;
+pub mod verdicts;

@@ -1,0 +1,3 @@
+//! PURE. Numbers and nothing else.
+
+pub mod exact_sum;
