@@ -8,8 +8,18 @@
 //! PURE: no files, no Arrow, no logging; slices in, slices out. catalogue, verdicts, release, tables and mock never
 //! import each other; engine hands data on.
 
+pub mod calibration;
 pub mod catalogue;
+pub mod cli;
 pub mod columnar;
+pub mod engine;
 pub mod error;
 pub mod frame;
+pub mod mock;
+pub mod numerics;
+pub mod plan;
+pub mod posterior;
 pub mod release;
+pub mod sky;
+pub mod tables;
+pub mod verdicts;

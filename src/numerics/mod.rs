@@ -1,3 +1,5 @@
-//! PURE. Magnitudes and moduli, exact sums, special functions.
+//! PURE. Numerical tools: magnitudes and moduli, sums that no order changes, elementary functions with the same bits on
+//! every machine.
 
+pub mod exact_sum;
 pub mod magnitude;
