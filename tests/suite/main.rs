@@ -1,0 +1,12 @@
+//! All integration tests in one binary, so that polars is linked once.
+
+mod house;
+mod magnitudes;
+mod mock;
+mod posterior;
+mod release;
+mod storage;
+mod tables;
+mod verdicts;
+mod world;
+mod wrong;
