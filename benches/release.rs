@@ -16,14 +16,16 @@ use parquet::column::writer::ColumnCloseResult;
 use parquet::file::properties::{EnabledStatistics, WriterProperties};
 use parquet::file::writer::SerializedFileWriter;
 use parquet::schema::types::Type;
-use rayon::prelude::*;
 use std::collections::BTreeMap;
 use std::fs::File;
+use std::io::BufWriter;
 use std::path::{Path, PathBuf};
 use std::process::Command;
-use std::sync::{Arc, Mutex, mpsc};
+use std::sync::{Arc, Mutex};
 use std::time::Instant;
 use tenparsec::columnar::source::SourceFile;
+use tenparsec::engine::schedule::{self, Work};
+use tenparsec::error::Result;
 
 const PROGRAM: &str = env!("CARGO_BIN_EXE_tenparsec");
 
@@ -169,44 +171,54 @@ fn floor(input: &Path, ready: &[RecordBatch], output: &Path, threads: usize) -> 
     let properties = Arc::new(builder.build());
     let shape = SerializedFileWriter::new(std::io::sink(), new.root_schema_ptr(), properties.clone()).expect("a writer");
     let factory = ArrowRowGroupWriterFactory::new(&shape, schema.clone());
-    let file = std::io::BufWriter::with_capacity(1 << 20, File::create(output).expect("the output opens"));
-    let mut writer = SerializedFileWriter::new(file, root, properties).expect("a writer");
-    let pool = rayon::ThreadPoolBuilder::new().num_threads(threads).build().expect("threads");
-    // one thread: encode and copy in turn; more: one copies while the others encode
-    if threads == 1 {
-        for (group, batch) in ready.iter().enumerate() {
-            write_group(&mut writer, &source, group, encode(&factory, &schema, batch));
-        }
-    } else {
-        let (send, receive) = mpsc::sync_channel(threads);
-        let writer = Mutex::new(&mut writer);
-        pool.scope(|scope| {
-            scope.spawn(|_| {
-                let mut waiting = BTreeMap::new();
-                let mut writer = writer.lock().expect("no panics");
-                for group in 0..ready.len() {
-                    // this thread encodes too while it has nothing to write
-                    let chunks = loop {
-                        if let Some(chunks) = waiting.remove(&group) {
-                            break chunks;
-                        }
-                        let (number, chunks): (usize, Vec<ArrowColumnChunk>) = receive.recv().expect("encoders run");
-                        waiting.insert(number, chunks);
-                    };
-                    write_group(&mut writer, &source, group, chunks);
-                }
-            });
-            let send = send.clone();
-            scope.spawn(move |_| {
-                ready.par_iter().enumerate().with_max_len(1).for_each_with(send, |send, (group, batch)| {
-                    send.send((group, encode(&factory, &schema, batch))).expect("the writer runs");
-                });
-            });
-        });
-    }
+    let file = BufWriter::with_capacity(1 << 20, File::create(output).expect("the output opens"));
+    let writer = SerializedFileWriter::new(file, root, properties).expect("a writer");
+    let work = Floor { source: &source, factory, schema, ready, writer: Mutex::new(writer) };
+    schedule::run(&work, &[0], threads, threads + 1).expect("the floor is written");
+    let mut writer = work.writer.into_inner().expect("no panics");
     writer.finish().expect("the footer is written");
     writer.into_inner().expect("written").into_inner().expect("flushed").sync_all().expect("synced");
     start.elapsed().as_secs_f64()
+}
+
+/// The floor under the scheduling of the program, so that threads are used as well as there.
+struct Floor<'a> {
+    source: &'a SourceFile,
+    factory: ArrowRowGroupWriterFactory,
+    schema: Arc<Schema>,
+    ready: &'a [RecordBatch],
+    writer: Mutex<SerializedFileWriter<BufWriter<File>>>,
+}
+
+impl Work for Floor<'_> {
+    type Made = Vec<ArrowColumnChunk>;
+    type Open = usize;
+
+    fn pieces(&self, _part: usize) -> usize {
+        self.ready.len()
+    }
+
+    fn make(&self, _part: usize, piece: usize) -> Result<Self::Made> {
+        Ok(encode(&self.factory, &self.schema, &self.ready[piece]))
+    }
+
+    fn open(&self, _part: usize) -> Result<usize> {
+        Ok(0)
+    }
+
+    fn commit(&self, _part: usize, open: &mut usize, made: Self::Made) -> Result<()> {
+        write_group(&mut self.writer.lock().expect("no panics"), self.source, *open, made);
+        *open += 1;
+        Ok(())
+    }
+
+    fn close(&self, _part: usize, _open: usize) -> Result<()> {
+        Ok(())
+    }
+
+    fn stopping(&self) -> bool {
+        false
+    }
 }
 
 fn encode(factory: &ArrowRowGroupWriterFactory, schema: &Arc<Schema>, batch: &RecordBatch) -> Vec<ArrowColumnChunk> {
