@@ -13,4 +13,5 @@ pub mod error;
 pub mod frame;
 pub mod numerics;
 pub mod plan;
+pub mod tables;
 pub mod verdicts;
