@@ -15,7 +15,7 @@ use crate::release::{
     ColumnRecord, FileRecord, InputRecord, Ledger, LedgerEntry, LedgerHeader, Manifest, Origin, PartRecord, PartWriter,
     ReleaseFolder, State, write_whole,
 };
-use crate::tables::CutRow;
+use crate::tables::{self, CutRow};
 use serde_json::json;
 use std::collections::BTreeMap;
 use std::path::PathBuf;
@@ -48,7 +48,7 @@ pub fn resources(job: &Job, threads: Option<usize>, memory: Option<u64>) -> Resu
     let piece = job.piece_memory();
     let budget = memory.or_else(|| machine::memory().map(|bytes| bytes / 2)).unwrap_or(4 << 30);
     // footers, tables and the program itself
-    let rest = (96 << 20) + 4 * job.tables.memory();
+    let rest = (96 << 20);
     let fit = budget.saturating_sub(rest) / piece.max(1);
     if fit == 0 {
         let least = machine::show_size(rest + piece);
@@ -224,7 +224,7 @@ fn write_tables(job: &Job, folder: &ReleaseFolder, total: &Tally) -> Result<Vec<
     let place = folder.subfolder("tables")?;
     let mut records = Vec::new();
     for table in job.tables.finish(&total.tables, &cuts)? {
-        for (ending, bytes) in [("parquet", table.to_parquet()?), ("csv", table.to_csv()?)] {
+        for (ending, bytes) in [("parquet", tables::parquet(&table)?), ("csv", tables::csv(&table)?)] {
             let name = format!("{}.{ending}", table.name);
             write_whole(&place.join(&name), &bytes)?;
             records.push(FileRecord {

@@ -10,7 +10,7 @@ use crate::frame::Declared;
 use crate::plan::lineage::Recipes;
 use crate::plan::{Plan, Precision};
 use crate::release::{Layout, PassThrough};
-use crate::tables::{Resolver, Tables};
+use crate::tables::{Names, Tables};
 use crate::verdicts::Cuts;
 use arrow::datatypes::{FieldRef, Schema};
 use std::collections::VecDeque;
@@ -76,11 +76,11 @@ impl Job {
         let cuts = Cuts::new(&plan.document.cuts, &Schema::new(columns.clone()));
         declared.extend(fields::verdict_declarations());
         columns.extend(plain_fields(&fields::verdict_declarations(), double));
-        let resolver = Resolver {
-            magnitude: plan.survey.bands.keys().map(|b| (b.clone(), plan.survey.magnitude_column(b))).collect(),
+        let names = Names {
+            apparent: plan.survey.bands.keys().map(|b| (b.clone(), plan.survey.magnitude_column(b))).collect(),
             colours: plan.survey.colours.keys().cloned().collect(),
         };
-        let tables = Tables::new(&plan.document.tables, &resolver, &Schema::new(columns));
+        let tables = Tables::new(&plan.document.tables, &names, &Schema::new(columns));
         let (cuts, tables) = match (cuts, tables) {
             (Ok(cuts), Ok(tables)) if faults.is_empty() => (cuts, tables),
             (cuts, tables) => {

@@ -51,7 +51,7 @@ impl Tally {
         self.cuts.merge(&other.cuts);
         merge_unusable(&mut self.unusable, &other.unusable);
         self.stars.merge(&other.stars);
-        self.tables.merge(other.tables)
+        self.tables.merge(&other.tables)
     }
 }
 

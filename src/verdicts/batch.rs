@@ -6,6 +6,7 @@
 use arrow::array::{BooleanArray, UInt32Array};
 use arrow::buffer::BooleanBuffer;
 
+use super::statistics::Verdict;
 use super::{CutCounts, Judgement};
 
 /// Failed and missing cuts of each row that is still in the batch.
@@ -39,11 +40,14 @@ impl BatchVerdict {
         }
     }
 
-    /// Applies cut `i` when row-group statistics have proved that all rows pass, or that all fail without one missing.
-    pub fn apply_to_all(&mut self, i: usize, keep: bool) {
+    /// Applies cut `i` when row-group statistics have decided it for all rows.
+    pub fn apply_to_all(&mut self, i: usize, verdict: Verdict) {
         self.judged |= 1 << i;
-        if !keep {
+        if verdict != Verdict::AllKeep {
             self.fails.iter_mut().for_each(|f| *f |= 1 << i);
+        }
+        if verdict == Verdict::AllMissing {
+            self.missing.iter_mut().for_each(|m| *m |= 1 << i);
         }
     }
 

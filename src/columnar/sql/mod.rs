@@ -15,6 +15,7 @@ mod functions;
 mod translate;
 
 use std::collections::BTreeMap;
+use std::sync::Arc;
 
 use arrow::datatypes::Schema;
 use arrow::record_batch::RecordBatch;
@@ -28,7 +29,7 @@ use sqlparser::tokenizer::Token;
 use super::bridge::{self, Handed};
 use crate::error::{Error, Result, suggestion};
 
-pub use translate::translate;
+pub use translate::{arguments, is_aggregate, translate};
 
 /// Longest SQL text that is read, in bytes; bounds the depth of what follows.
 const LONGEST: usize = 64 * 1024;
@@ -64,6 +65,19 @@ pub struct Scope {
     replaced: BTreeMap<String, (String, Handed)>,
     /// Table names that may stand before a column (`release.ruwe`).
     tables: Vec<String>,
+    aggregates: Option<Arc<dyn Aggregates>>,
+}
+
+/// Where aggregates may stand: gives each the column that will hold its result.
+pub trait Aggregates: std::fmt::Debug {
+    /// Name and type of the result column of `function`.
+    ///
+    /// # Errors
+    /// An aggregate that cannot be computed.
+    fn column(&self, function: &ast::Function) -> Result<(String, Handed)>;
+
+    /// Type of a result column that [`Self::column`] has named.
+    fn kind(&self, name: &str) -> Option<Handed>;
 }
 
 impl Scope {
@@ -83,6 +97,23 @@ impl Scope {
     /// Lets the expression with this text (see [`text_of`]) stand for a column `name` of the frame.
     pub fn replace(&mut self, text: String, name: String, kind: Handed) {
         self.replaced.insert(text, (name, kind));
+    }
+
+    /// The scope of what follows grouping: columns of the table may not be named any more, `aggregates` may stand.
+    pub fn grouped(&self, aggregates: Arc<dyn Aggregates>) -> Self {
+        let gone = |known: &Result<Handed>| match known {
+            Ok(_) => Err(Error::plan("is neither in GROUP BY nor inside an aggregate such as AVG(...)")),
+            Err(why) => Err(why.clone()),
+        };
+        let columns = self.columns.iter().map(|(name, known)| (name.clone(), gone(known))).collect();
+        Self { columns, aggregates: Some(aggregates), ..self.clone() }
+    }
+
+    /// Type of a column of the frame that expressions run on.
+    fn frame_kind(&self, name: &str) -> Result<Handed> {
+        let replaced = self.replaced.values().find(|(column, _)| column == name).map(|(_, kind)| *kind);
+        let aggregate = || self.aggregates.as_ref().and_then(|a| a.kind(name));
+        replaced.or_else(aggregate).map_or_else(|| self.kind(name), Ok)
     }
 
     /// True if a column of this name exists.
@@ -299,9 +330,7 @@ impl Expression {
     /// Runs on an empty frame, so that a fault shows when the plan is read and not in the night.
     fn try_on_nothing(&self, scope: &Scope) -> Result<()> {
         let columns = self.columns.iter().map(|name| {
-            let kind = scope.kind(name).or_else(|e| {
-                scope.replaced.values().find(|(n, _)| n == name).map(|(_, kind)| *kind).ok_or(e)
-            })?;
+            let kind = scope.frame_kind(name)?;
             Ok(pl::Column::from(pl::Series::new_empty(name.as_str().into(), &kind.polars())))
         });
         let frame = pl::DataFrame::new(0, columns.collect::<Result<Vec<_>>>()?);

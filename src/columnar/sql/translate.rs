@@ -482,6 +482,9 @@ impl Translator<'_> {
             return Err(Error::plan(format!("`{function}` is a window function; an expression here sees one row at a time.")));
         }
         if is_aggregate(&name) {
+            if let Some(aggregates) = &self.scope.aggregates {
+                return aggregates.column(function).map(|(name, kind)| Typed::of(pl::col(name), kind));
+            }
             return Err(Error::plan(format!(
                 "`{function}` is an aggregate over many rows, which cannot stand here; an expression here sees one row at a time."
             )));
