@@ -168,15 +168,19 @@ impl fmt::Display for Error {
 
 impl std::error::Error for Error {}
 
-/// `name` nearest to one of `known`, if near enough to be a slip of the finger.
+/// The one of `known` that is nearest to `name`, if near enough to be a slip of the finger.
 pub fn nearest<'a>(name: &str, known: impl IntoIterator<Item = &'a str>) -> Option<&'a str> {
     let lower = name.to_lowercase();
+    let slips = 1 + lower.chars().count() / 5;
     known
         .into_iter()
-        .map(|k| (strsim::jaro_winkler(&lower, &k.to_lowercase()), k))
-        .filter(|(score, _)| *score > 0.80)
-        .max_by(|a, b| a.0.total_cmp(&b.0))
-        .map(|(_, k)| k)
+        .map(|k| {
+            let other = k.to_lowercase();
+            (strsim::damerau_levenshtein(&lower, &other), strsim::jaro_winkler(&lower, &other), k)
+        })
+        .filter(|(distance, alike, _)| *distance <= slips || *alike > 0.85)
+        .min_by(|a, b| a.0.cmp(&b.0).then(b.1.total_cmp(&a.1)))
+        .map(|(_, _, k)| k)
 }
 
 /// " Did you mean `x`?" when something is near, else empty; made to be appended to a sentence.

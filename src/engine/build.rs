@@ -48,7 +48,7 @@ pub fn resources(job: &Job, threads: Option<usize>, memory: Option<u64>) -> Resu
     let piece = job.piece_memory();
     let budget = memory.or_else(|| machine::memory().map(|bytes| bytes / 2)).unwrap_or(4 << 30);
     // footers, tables and the program itself
-    let rest = (96 << 20);
+    let rest = 96 << 20;
     let fit = budget.saturating_sub(rest) / piece.max(1);
     if fit == 0 {
         let least = machine::show_size(rest + piece);

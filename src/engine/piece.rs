@@ -170,7 +170,7 @@ fn chunk(
     mut batch: RecordBatch,
     pass_through: usize,
     decided: &[Option<Verdict>],
-    encoder: &mut PieceEncoder<'_>,
+    encoder: &mut PieceEncoder,
     tally: &mut Tally,
 ) -> Result<()> {
     let mut numbers = job.pipeline.load(&batch, &mut tally.unusable)?;

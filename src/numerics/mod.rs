@@ -2,4 +2,5 @@
 //! every machine.
 
 pub mod exact_sum;
+pub mod lanes;
 pub mod magnitude;

@@ -183,6 +183,11 @@ impl ReleaseFolder {
         let ledger_path = self.root.join(ledger::FILE);
         let finished = ledger::named_parts(&ledger_path);
         named.extend(finished.iter().filter_map(|file| inside(file).ok()));
+        if ledger_path.exists() {
+            // a build that was killed between a part's rename and its ledger line leaves the part unnamed
+            let parts = fs::read_dir(self.root.join(PARTS)).into_iter().flatten().flatten();
+            named.extend(parts.map(|item| Path::new(PARTS).join(item.file_name())).filter(|path| is_part_name(path)));
+        }
 
         let mut remove = Vec::new();
         let mut kept = Vec::new();

@@ -3,7 +3,7 @@
 use std::fs::File;
 use std::io::Write;
 use std::path::{Path, PathBuf};
-use std::sync::Arc;
+use std::sync::{Arc, OnceLock};
 
 use parquet::file::writer::SerializedFileWriter;
 
@@ -13,7 +13,7 @@ use super::layout::Layout;
 use super::manifest::PartRecord;
 use super::splice::splice;
 use super::whole::{publish, write_error};
-use crate::columnar::guard::{guard, parquet_error};
+use crate::columnar::guard::{guard, io_reason, parquet_error};
 use crate::columnar::source::SourceFile;
 use crate::error::{Error, Result};
 
@@ -27,6 +27,7 @@ pub struct PartWriter {
     target: PathBuf,
     temporary: PathBuf,
     writer: Option<SerializedFileWriter<HashingFile<File>>>,
+    failure: Arc<OnceLock<String>>,
     first_row: u64,
     rows: u64,
     rows_in: u64,
@@ -38,7 +39,9 @@ impl PartWriter {
         let target = dir.join(name);
         let temporary = unfinished_part(dir, name);
         let file = File::create(&temporary).map_err(|error| write_error(&target, &error))?;
+        let sink = HashingFile::new(file);
         let mut part = Self {
+            failure: sink.failure.clone(),
             layout: layout.clone(),
             name: name.to_owned(),
             target,
@@ -48,7 +51,6 @@ impl PartWriter {
             rows: 0,
             rows_in: 0,
         };
-        let sink = HashingFile::new(file);
         let writer = SerializedFileWriter::new(sink, layout.root.clone(), layout.properties.clone());
         part.writer = Some(writer.map_err(|error| part.failed(error))?);
         Ok(part)
@@ -131,7 +133,10 @@ impl PartWriter {
     ) -> Result<()> {
         let mut writer = self.writer.take().ok_or_else(|| defect("a part is written after a failure".into()))?;
         let leaves = self.layout.input_leaves;
-        guard(|| work(&mut writer, leaves))?;
+        guard(|| work(&mut writer, leaves)).map_err(|error| match self.failure.get() {
+            Some(reason) => Error::failed(format!("The file cannot be written: {reason}.")).in_file(&self.target),
+            None => error,
+        })?;
         self.writer = Some(writer);
         Ok(())
     }
@@ -154,15 +159,20 @@ struct HashingFile<W: Write> {
     buffer: Vec<u8>,
     hasher: blake3::Hasher,
     bytes: u64,
+    /// Why a write failed; whoever copied from an input at that moment must not blame the input.
+    failure: Arc<OnceLock<String>>,
 }
 
 impl<W: Write> HashingFile<W> {
     fn new(inner: W) -> Self {
-        Self { inner, buffer: Vec::with_capacity(BUFFER), hasher: blake3::Hasher::new(), bytes: 0 }
+        let buffer = Vec::with_capacity(BUFFER);
+        Self { inner, buffer, hasher: blake3::Hasher::new(), bytes: 0, failure: Arc::default() }
     }
 
     fn pass_on(&mut self) -> std::io::Result<()> {
-        self.inner.write_all(&self.buffer)?;
+        self.inner.write_all(&self.buffer).inspect_err(|error| {
+            let _ = self.failure.set(io_reason(error));
+        })?;
         self.hasher.update(&self.buffer);
         self.bytes += self.buffer.len() as u64;
         self.buffer.clear();

@@ -87,7 +87,8 @@ pub fn stars(rows: usize) -> RecordBatch {
 
 /// `batch` with column `name` replaced.
 pub fn with(batch: &RecordBatch, name: &str, array: ArrayRef) -> RecordBatch {
-    let fields = batch.schema().fields().iter().map(|field| {
+    let old = batch.schema();
+    let fields = old.fields().iter().map(|field| {
         if field.name() == name { Arc::new(Field::new(name, array.data_type().clone(), true)) } else { field.clone() }
     });
     let schema = Schema::new(fields.collect::<Vec<_>>());
