@@ -2,11 +2,11 @@
 
 mod house;
 mod magnitudes;
-//mod mock;
-//mod posterior;
+mod mock;
+mod posterior;
 mod release;
-//mod storage;
-//mod tables;
-//mod verdicts;
+mod storage;
+mod tables;
+mod verdicts;
 mod world;
 mod wrong;
