@@ -86,8 +86,10 @@ fn entry(pattern: &str, base: &Path, walk: &mut Walk) -> Result<Vec<PathBuf>> {
             Error::plan(format!("`{pattern}` is not a valid glob: {}.", error.msg)).at_key("release.catalogue")
         })?;
         for path in matches {
-            let path =
-                path.map_err(|error| Error::failed(format!("{}.", io_reason(error.error()))).in_file(error.path()))?;
+            let path = path.map_err(|error| {
+                Error::failed(format!("The folder cannot be listed: {}.", io_reason(error.error())))
+                    .in_file(error.path())
+            })?;
             if path.is_dir() {
                 walk.folder(&path, &mut found)?;
             } else if !walk.excepted(&path) {

@@ -114,7 +114,7 @@ impl Catalogue {
                     format!("all {} files are empty", files.len())
                 }
             ))
-            .in_file(&files[0].path));
+            .in_file(&files[0].shown));
         }
         let empty = files.iter().filter(|file| file.rows == 0).count();
         if empty > 0 {

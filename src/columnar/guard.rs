@@ -56,7 +56,7 @@ pub fn parquet_error(error: ParquetError) -> Error {
     if let ParquetError::External(inner) = &error
         && let Some(io) = inner.downcast_ref::<std::io::Error>()
     {
-        return Error::failed(format!("{}.", io_reason(io)));
+        return Error::failed(format!("Reading or writing failed: {}.", io_reason(io)));
     }
     let text = match error {
         ParquetError::General(text) | ParquetError::EOF(text) | ParquetError::ArrowError(text) => text,
@@ -66,20 +66,16 @@ pub fn parquet_error(error: ParquetError) -> Error {
     Error::failed(format!("Parquet data cannot be decoded: {}.", text.trim_end_matches('.')))
 }
 
-/// A cause for the end of a sentence: "the disk is full", "permission denied", ...
+/// A cause for the end of a sentence, without full stop: "permission denied; check ...".
 pub fn io_reason(error: &std::io::Error) -> String {
     use std::io::ErrorKind as K;
     match error.kind() {
-        K::StorageFull => "The disk is full; free some space and run the same command again".into(),
-        K::QuotaExceeded => "Your disk quota is used up; free some space and run the same command again".into(),
-        K::ReadOnlyFilesystem => "The disk is mounted read-only; choose another place".into(),
-        K::PermissionDenied => "Permission denied; check the owner and mode of the file and its folder".into(),
-        K::NotFound => "There is no such file or folder".into(),
-        K::FileTooLarge => "The file would be larger than this disk or user limit allows".into(),
-        _ => {
-            let text = error.to_string();
-            let mut letters = text.chars();
-            letters.next().map(|first| first.to_uppercase().chain(letters).collect()).unwrap_or(text)
-        }
+        K::StorageFull => "the disk is full; free some space and run the same command again".into(),
+        K::QuotaExceeded => "your disk quota is used up; free some space and run the same command again".into(),
+        K::ReadOnlyFilesystem => "the disk is mounted read-only; choose another place".into(),
+        K::PermissionDenied => "permission denied; check the owner and mode of the file and its folder".into(),
+        K::NotFound => "there is no such file or folder".into(),
+        K::FileTooLarge => "the file would be larger than this disk or user limit allows".into(),
+        _ => error.to_string(),
     }
 }

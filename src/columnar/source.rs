@@ -76,11 +76,13 @@ impl SourceFile {
     }
 
     fn open_inner(path: &Path, shown: &str) -> Result<Self> {
-        let file = File::open(path).map_err(|error| Error::failed(format!("{}.", io_reason(&error))))?;
+        let file = File::open(path)
+            .map_err(|error| Error::failed(format!("The file cannot be read: {}.", io_reason(&error))))?;
         if file.metadata().is_ok_and(|m| m.is_dir()) {
             return Err(Error::failed("This is a folder, not a Parquet file."));
         }
-        let reader = Pread::new(file).map_err(|error| Error::failed(format!("{}.", io_reason(&error))))?;
+        let reader = Pread::new(file)
+            .map_err(|error| Error::failed(format!("The file cannot be read: {}.", io_reason(&error))))?;
         let footer = read_footer(&reader)?;
         let bytes = parquet::file::reader::Length::len(&reader);
         let mut hasher = blake3::Hasher::new();

@@ -110,7 +110,8 @@ impl Ledger {
         let file = OpenOptions::new().append(true).open(&path);
         let file = file.map_err(|error| write_error(&path, &error))?;
         let mut ledger = Self::locked(path.clone(), file)?;
-        let text = std::fs::read(&path).map_err(|error| fail(format!("{}.", io_reason(&error))))?;
+        let text =
+            std::fs::read(&path).map_err(|error| fail(format!("The ledger cannot be read: {}.", io_reason(&error))))?;
         let whole = text.iter().rposition(|byte| *byte == b'\n').map_or(0, |at| at + 1);
         let mut lines = text[..whole].split(|byte| *byte == b'\n').filter(|line| !line.is_empty());
         match lines.next() {
@@ -188,8 +189,10 @@ impl Ledger {
 pub(super) fn is_ledger(path: &Path) -> bool {
     let mut first = String::new();
     let read = File::open(path).and_then(|file| BufReader::new(file.take(MAX_HEADER)).read_line(&mut first));
-    // an empty file under this name is what a power cut between creation and first line leaves
-    read.is_ok() && (first.is_empty() || serde_json::from_str::<LedgerHeader>(&first).is_ok_and(|h| h.format == FORMAT))
+    // a power cut during the first write leaves nothing or a piece of the header
+    let mark = format!("{{\"format\":\"{FORMAT}\"");
+    let torn = !first.ends_with('\n') && (first.starts_with(&mark) || mark.starts_with(&first));
+    read.is_ok() && (torn || serde_json::from_str::<LedgerHeader>(&first).is_ok_and(|header| header.format == FORMAT))
 }
 
 /// Parts named by a ledger, as far as its lines can be read.
@@ -223,7 +226,9 @@ fn check_header(line: &[u8], wanted: &LedgerHeader) -> Result<()> {
 
 fn check_part(release: &Path, part: &PartRecord) -> Result<()> {
     let path = release.join(super::folder::inside(&part.file)?);
-    let bytes = std::fs::metadata(&path).map_err(|error| Error::failed(format!("{}.", io_reason(&error))))?.len();
+    let bytes = std::fs::metadata(&path)
+        .map_err(|error| Error::failed(format!("The file cannot be read: {}.", io_reason(&error))))?
+        .len();
     if bytes != part.bytes {
         return Err(Error::failed(format!("It has {bytes} bytes instead of {}.", part.bytes)));
     }

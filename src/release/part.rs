@@ -219,9 +219,9 @@ mod tests {
         file.write_all(&[7; 100]).unwrap();
         let error = file.finish().unwrap_err();
         let shown = write_error(Path::new("part-00000.parquet"), &error).to_string();
-        assert!(shown.contains("The disk is full"), "{shown}");
+        assert!(shown.contains("the disk is full"), "{shown}");
         let inside = parquet_error(parquet::errors::ParquetError::from(error)).to_string();
-        assert!(inside.contains("The disk is full"), "{inside}");
+        assert!(inside.contains("the disk is full"), "{inside}");
     }
 
     #[test]
