@@ -2,7 +2,7 @@
 
 use crate::engine::machine::{show_count, show_size, show_time};
 use crate::engine::progress::{Progress, Voice};
-use crate::error::Result;
+use crate::error::{Error, Result};
 use crate::mock;
 use clap::Args;
 use std::path::PathBuf;
@@ -49,11 +49,15 @@ pub(super) fn run(options: &Options, voice: Voice, colour: bool) -> Result<u8> {
         rows: options.rows,
         files: options.files as usize,
         seed: options.seed,
-        row_group_rows: options.row_group_rows as usize,
+        row_group_rows: options.row_group_rows,
         truth: !options.no_truth,
-        threads: options.threads.map_or_else(crate::engine::machine::threads, usize::from),
     };
-    let summary = progress.watch(|| mock::write(&request, &|rows| progress.add(rows, 0)))?;
+    let threads = options.threads.map_or_else(crate::engine::machine::threads, usize::from);
+    rayon::ThreadPoolBuilder::new()
+        .num_threads(threads)
+        .build_global()
+        .map_err(|e| Error::failed(format!("The worker threads cannot be started: {e}.")))?;
+    let summary = progress.watch(|| mock::write(&request, &|rows| progress.set(rows)))?;
     if voice == Voice::Text {
         println!(
             "{} invented stars in {} ({}), {}",
@@ -62,7 +66,7 @@ pub(super) fn run(options: &Options, voice: Voice, colour: bool) -> Result<u8> {
             show_size(summary.bytes),
             show_time(start.elapsed().as_secs_f64())
         );
-        println!("next: tenparsec build {}", options.out.join("plan.toml").display());
+        println!("next: tenparsec build {}", summary.plan.display());
     }
     Ok(0)
 }

@@ -73,6 +73,12 @@ impl Progress {
         }
     }
 
+    /// Rows that are through by now, for work that counts them itself.
+    pub fn set(&self, rows: u64) {
+        self.rows.store(rows, Ordering::Relaxed);
+        self.add(0, 0);
+    }
+
     /// A part is on disk.
     pub fn part_done(&self, file: &str, rows: u64, bytes: u64) {
         self.parts.fetch_add(1, Ordering::Relaxed);
@@ -82,7 +88,7 @@ impl Progress {
     }
 
     /// Runs `work` while lines appear from time to time.
-    pub fn watch<T: Send>(&self, work: impl FnOnce() -> T + Send) -> T {
+    pub fn watch<T>(&self, work: impl FnOnce() -> T) -> T {
         std::thread::scope(|scope| {
             scope.spawn(|| self.speak_now_and_then());
             let result = work();

@@ -165,16 +165,22 @@ impl<S: Simd> Lanes<S> {
         Mask { simd: self.simd, value: self.simd.less_than_or_equal_f64s(self.value, other.value) }
     }
 
-    /// The larger one; `other` where either is NaN.
+    /// The larger one; neither may be NaN (machines differ there).
     #[inline(always)]
     pub fn max(self, other: Self) -> Self {
-        other.below(self).select(self, other)
+        Self { simd: self.simd, value: self.simd.max_f64s(self.value, other.value) }
     }
 
-    /// The smaller one; `other` where either is NaN.
+    /// The smaller one; neither may be NaN.
     #[inline(always)]
     pub fn min(self, other: Self) -> Self {
-        self.below(other).select(self, other)
+        Self { simd: self.simd, value: self.simd.min_f64s(self.value, other.value) }
+    }
+
+    /// Whether any lane is above 0.
+    #[inline(always)]
+    pub fn any_positive(self) -> bool {
+        self.simd.reduce_max_f64s(self.value) > 0.0
     }
 
     /// Absolute value.
@@ -238,6 +244,19 @@ impl<S: Simd> Lanes<S> {
         sum * k.power_of_two()
     }
 
+    /// e^x with relative error below 3e-6 (and below |x|^6/700 for small x): for deciding where to look, not for results.
+    #[inline(always)]
+    pub fn rough_exp(self) -> Self {
+        let x = self.clamp(-700.0, 700.0);
+        let k = (x * std::f64::consts::LOG2_E).round();
+        let r = x - k * std::f64::consts::LN_2;
+        let mut sum = r * INVERSE_FACTORIAL[5] + INVERSE_FACTORIAL[4];
+        for n in (0..4).rev() {
+            sum = sum * r + INVERSE_FACTORIAL[n];
+        }
+        sum * k.power_of_two()
+    }
+
     /// e^y for use as a weight: the relative error stays below 1e-11 for -5 < y <= 1 and 6e-10 at y = -10, growing to 3e-5
     /// at -40, where weights no longer count. Below -40 the weight of -40 (4e-18) is given; above 1, that of 1.
     #[inline(always)]
@@ -254,9 +273,9 @@ impl<S: Simd> Lanes<S> {
         e
     }
 
-    /// ln x with absolute error below 4e-16 or relative error below 4e-16, for positive normal x.
+    /// x = 2^k (1 + f) with 1 + f in [sqrt(1/2), sqrt(2)]: k and f.
     #[inline(always)]
-    pub fn ln(self) -> Self {
+    fn split(self) -> (Self, Self) {
         let simd = self.simd;
         let words = self.words();
         let exponent = simd.and_u32s(words, self.word_pairs(0, 0x7ff0_0000));
@@ -269,8 +288,14 @@ impl<S: Simd> Lanes<S> {
         let large = self.like(std::f64::consts::SQRT_2).below(mantissa);
         let m = large.select(mantissa * 0.5, mantissa);
         let k = large.select(exponent + 1.0, exponent);
-        let f = m - 1.0;
-        let s = f / (m + 1.0);
+        (k, m - 1.0)
+    }
+
+    /// ln x with absolute error below 4e-16 or relative error below 4e-16, for positive normal x.
+    #[inline(always)]
+    pub fn ln(self) -> Self {
+        let (k, f) = self.split();
+        let s = f / (f + 2.0);
         let q = s * s;
         let mut sum = q * (2.0 / 23.0) + 2.0 / 21.0;
         for n in (1..10).rev() {
@@ -278,6 +303,15 @@ impl<S: Simd> Lanes<S> {
         }
         // ln m = 2 s + s q (...); 2 s = f - s f keeps the leading term exact
         k * LN2_HIGH + (f - (s * (f - q * sum) - k * LN2_LOW))
+    }
+
+    /// ln x with absolute error below 1e-7: for deciding where to look, not for results.
+    #[inline(always)]
+    pub fn rough_ln(self) -> Self {
+        let (k, f) = self.split();
+        let s = f / (f + 2.0);
+        let q = s * s;
+        k * std::f64::consts::LN_2 + s * (((q * (2.0 / 7.0) + 0.4) * q + 2.0 / 3.0) * q + 2.0)
     }
 }
 

@@ -9,7 +9,7 @@
 
 use pulp::Simd;
 
-use super::LEVELS;
+use super::{LEVELS, WIDEST, bands};
 use super::local::{self, Point, Scale};
 use super::locate::{Rule, Stars};
 use crate::numerics::lanes::Lanes;
@@ -30,10 +30,16 @@ pub(super) struct Summary<S: Simd> {
     pub variance: Lanes<S>,
     /// 1 where the mode did not settle
     pub restless: Lanes<S>,
+    /// The upper end where the prior cuts a significant density, far away elsewhere.
+    pub edge: Lanes<S>,
+    /// Heat series of each quantile, in x (only with `BANDS`).
+    pub heat: [[Lanes<S>; 4]; 3],
+    /// Cumulants 2 to 8 of x (only with `BANDS`).
+    pub cumulants: [Lanes<S>; 7],
 }
 
 #[inline(always)]
-pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
+pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const BANDS: bool>(
     stars: &Stars<S>,
     rule: &Rule<S>,
     low: Lanes<S>,
@@ -60,12 +66,9 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
     let rise = rule.power * h;
 
     let mut sum = simd_zero;
-    let mut first = simd_zero;
-    let mut second = simd_zero;
+    let mut sums = [simd_zero; 9];
     let mut best = s.like(f64::NEG_INFINITY);
     let mut best_node = simd_zero;
-    let mut best_u = u;
-    let mut best_t = t;
     let mut last = simd_zero;
     let mut last_at = Point { u, t };
     let buffers = nodes.sum.iter_mut().zip(nodes.u.iter_mut()).zip(nodes.t.iter_mut());
@@ -78,9 +81,12 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
         }
         let weight = y.weight();
         sum = sum + weight;
-        let arm = weight * (index - middle);
-        first = first + arm;
-        second = second + arm * (index - middle);
+        let mut arm = weight * (index - middle);
+        sums[1] = sums[1] + arm;
+        for moment in &mut sums[2..if BANDS { 9 } else { 3 }] {
+            arm = arm * (index - middle);
+            *moment = *moment + arm;
+        }
         *sum_slot = sum.vector();
         *u_slot = u.vector();
         *t_slot = t.vector();
@@ -88,8 +94,6 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
         let better = best.below(in_distance);
         best = better.select(in_distance, best);
         best_node = better.select(s.like(index), best_node);
-        best_u = better.select(u, best_u);
-        best_t = better.select(t, best_t);
         last = weight;
         last_at = Point { u, t };
         u = u * shrink;
@@ -107,43 +111,50 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
         let ppf = a[1] * (6.0 / 720.0) - a[3] * (120.0 / 30240.0) + a[5] * (5040.0 / 1209600.0);
         let p = s.like(middle);
         sum = sum - last * (1.0 - f);
-        first = first - last * (p * (1.0 - f) - pf);
-        second = second - last * (p * p * (1.0 - f) - 2.0 * p * pf - ppf);
+        sums[1] = sums[1] - last * (p * (1.0 - f) - pf);
+        sums[2] = sums[2] - last * (p * p * (1.0 - f) - 2.0 * p * pf - ppf);
     }
-    let shift = first / sum;
-    let variance = (second / sum - shift * shift) * h * h;
+    let shift = sums[1] / sum;
+    let variance = (sums[2] / sum - shift * shift) * h * h;
     let mean = low + (shift + middle) * h;
 
-    let mut quantiles = [mean; 3];
-    for (level, quantile) in LEVELS.iter().zip(quantiles.iter_mut()) {
-        let goal = sum * *level;
-        let mut before = simd_zero;
-        let mut node = simd_zero;
-        let mut at_u = Lanes::of(s.token(), nodes.u[0]);
-        let mut at_t = Lanes::of(s.token(), nodes.t[0]);
-        let mut upto = Lanes::of(s.token(), nodes.sum[0]);
-        for j in 0..count - 1 {
-            let reached = Lanes::of(s.token(), nodes.sum[j]);
-            let short = reached.below(goal);
-            before = short.select(reached, before);
-            node = short.select(s.like((j + 1) as f64), node);
-            upto = short.select(Lanes::of(s.token(), nodes.sum[j + 1]), upto);
-            at_u = short.select(Lanes::of(s.token(), nodes.u[j + 1]), at_u);
-            if DECLINE {
-                at_t = short.select(Lanes::of(s.token(), nodes.t[j + 1]), at_t);
-            }
+    let goals = LEVELS.map(|level| sum * level);
+    // first node whose cumulative sum reaches the goal: the nearest node to the quantile
+    let mut found = [simd_zero; 3];
+    let simd = s.token();
+    for (j, reached) in nodes.sum[..count - 1].iter().enumerate() {
+        let reached = Lanes::of(simd, *reached);
+        let next = s.like((j + 1) as f64);
+        for (goal, node) in goals.iter().zip(found.iter_mut()) {
+            *node = reached.below(*goal).select(next, *node);
         }
-        let a = local::taylor(&scale.slopes::<DECLINE>(Point { u: at_u, t: at_t }));
-        let weight = (upto - before).max(s.like(1e-300));
-        let delta = local::invert(&a, (goal - before) / weight - local::half_weight(&a));
-        *quantile = low + (node + delta) * h;
+    }
+    let mut quantiles = [mean; 3];
+    let mut heat = [[simd_zero; 4]; 3];
+    for level in 0..3 {
+        let node = found[level];
+        let before = simd_zero.below(node).select(pick(nodes.sum, (node - 1.0).max(simd_zero)), simd_zero);
+        let weight = (pick(nodes.sum, node) - before).max(s.like(1e-300));
+        let at = Point { u: pick(nodes.u, node), t: if DECLINE { pick(nodes.t, node) } else { simd_zero } };
+        let a = local::taylor(&scale.slopes::<DECLINE>(at));
+        let delta = local::invert(&a, (goals[level] - before) / weight - local::half_weight(&a));
+        quantiles[level] = low + (node + delta) * h;
         if LIMIT {
-            *quantile = (*quantile).min(high);
+            quantiles[level] = quantiles[level].min(high);
+        }
+        if BANDS {
+            let offset = delta * h;
+            let u = at.u * (-offset).rough_exp();
+            let t = if DECLINE { at.t * (rule.alpha * offset).rough_exp() } else { simd_zero };
+            heat[level] = bands::heat_series(&local::taylor(&scale.slopes::<DECLINE>(Point { u, t })), h);
         }
     }
 
     // mode of the density in distance: slope of log density in x less 1
-    let mut slopes = scale.slopes::<DECLINE>(Point { u: best_u, t: best_t });
+    let mut slopes = scale.slopes::<DECLINE>(Point {
+        u: pick(nodes.u, best_node),
+        t: if DECLINE { pick(nodes.t, best_node) } else { simd_zero },
+    });
     slopes[0] = slopes[0] - h;
     let mut delta = simd_zero;
     let mut moved = simd_zero;
@@ -163,5 +174,25 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool>(
     }
     let mode = low + (best_node + delta) * h;
     let restless = s.like(1e-8).below(moved * h).select(s.like(1.0), simd_zero);
-    Summary { quantiles, mode, mean, variance, restless }
+    let far = s.like(1e9);
+    let edge = if LIMIT { s.like(1e-9).below(last).select(high, far) } else { far };
+    let mut cumulants = [simd_zero; 7];
+    if BANDS {
+        sums[0] = sum;
+        cumulants = bands::cumulants(&sums, h);
+    }
+    Summary { quantiles, mode, mean, variance, restless, edge, heat, cumulants }
+}
+
+/// Element `index` of each lane.
+#[inline(always)]
+fn pick<S: Simd>(from: &[S::f64s], index: Lanes<S>) -> Lanes<S> {
+    let mut places = [0.0; WIDEST];
+    index.store(&mut places[..S::F64_LANES]);
+    let flat: &[f64] = pulp::bytemuck::cast_slice(from);
+    let mut values = [0.0; WIDEST];
+    for lane in 0..S::F64_LANES {
+        values[lane] = flat.get(places[lane] as usize * S::F64_LANES + lane).copied().unwrap_or(0.0);
+    }
+    Lanes::load(index.token(), &values[..S::F64_LANES])
 }

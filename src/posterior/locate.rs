@@ -25,8 +25,13 @@ use crate::numerics::lanes::Lanes;
 
 /// How carefully to look.
 pub(super) struct Care {
-    /// Depth below the maximum (natural log) at which the density is negligible.
+    /// Depth below the maximum (natural log) at which the density is negligible on the near side, whose tail may be a mere
+    /// power law of the distance.
     pub depth: f64,
+    /// The same on the far side, where the density falls faster than exponentially or ends.
+    pub far_depth: f64,
+    /// A second maximum on the far side counts down to here: it may be wide and distant.
+    pub deep: f64,
     /// Depth to which the curvature is looked at.
     pub curved: f64,
     /// Step times sqrt(curvature).
@@ -34,9 +39,9 @@ pub(super) struct Care {
 }
 
 /// For rows with one well-behaved maximum.
-pub(super) const PLAIN: Care = Care { depth: 18.0, curved: 12.0, step: 0.75 };
+pub(super) const PLAIN: Care = Care { depth: 20.0, far_depth: 16.5, deep: 31.0, curved: 12.0, step: 0.85 };
 /// For all others.
-pub(super) const WIDE: Care = Care { depth: 36.0, curved: 32.0, step: 0.4 };
+pub(super) const WIDE: Care = Care { depth: 33.0, far_depth: 33.0, deep: 33.0, curved: 26.0, step: 0.5 };
 
 /// The data of a bundle of stars.
 #[derive(Clone, Copy)]
@@ -52,6 +57,7 @@ pub(super) struct Stars<S: Simd> {
 pub(super) struct Rule<S: Simd> {
     pub power: Lanes<S>,
     pub alpha: Lanes<S>,
+    pub ln_alpha: Lanes<S>,
     pub ln_length: Lanes<S>,
     /// Where alpha T = power; the upper end if there is no decline.
     pub ln_peak: Lanes<S>,
@@ -75,6 +81,7 @@ impl<S: Simd> Rule<S> {
         Self {
             power: splat(shape.power),
             alpha: splat(alpha),
+            ln_alpha: splat(libm::log(alpha)),
             ln_length: splat(ln_length),
             ln_peak: splat(ln_peak),
             beyond: splat(beyond),
@@ -116,15 +123,14 @@ fn bracket<S: Simd, const DECLINE: bool>(
     let ls = stars.ln_error;
     let zero = s.like(0.0);
     let peak = rule.ln_peak;
-    let u_peak = (-(peak + ls)).exp();
+    let u_peak = (-(peak + ls)).rough_exp();
     let ln_s = s.abs().max(s.like(1e-300)).ln();
     let near = u_peak.below(s);
     // distance of the parallax itself, -ln w
     let direct = -(ln_s + ls);
     let (start, end) = if DECLINE {
         let a = rule.alpha;
-        let ln_a = a.ln();
-        let base = a * rule.ln_length - ln_a;
+        let base = a * rule.ln_length - rule.ln_alpha;
         let first = (base - 2.0 * ls) / (a + 2.0);
         let second = (base + ln_s - ls) / (a + 1.0);
         let down = peak.max(first).max(second);
@@ -140,16 +146,16 @@ fn bracket<S: Simd, const DECLINE: bool>(
     } else {
         (near.select(direct, peak), peak)
     };
-    let u = (-(start + ls)).exp();
+    let u = (-(start + ls)).rough_exp();
     let mut t_start = zero;
     let mut push = zero;
     if DECLINE {
-        t_start = (rule.alpha * (start - rule.ln_length)).exp();
+        t_start = (rule.alpha * (start - rule.ln_length)).rough_exp();
         push = (rule.alpha * t_start - rule.power).max(zero) / u;
     }
     let pull = near.select(zero, (u - s - push).max(zero));
     let du = (2.0 * depth) / (pull + (pull * pull + 2.0 * depth).sqrt());
-    let mut low = start - (1.0 + du / u).ln();
+    let mut low = start - (1.0 + du / u).rough_ln();
     if DECLINE {
         // left of the prior's peak its power law alone falls by the depth
         let by_power = peak - (depth + rule.power / rule.alpha) / rule.power;
@@ -164,9 +170,9 @@ fn bracket<S: Simd, const DECLINE: bool>(
     }
     // what the prior can gain beyond the parallax distance
     let gain = rule.power * (peak - start) + t_start - if DECLINE { rule.power / rule.alpha } else { zero };
-    let clear = (2.0 * (depth + gain.max(zero))).sqrt();
-    let excluded = near.and(clear.below(s * 0.98));
-    let cut = start - (1.0 - excluded.select(clear / s, zero)).ln();
+    let clear = (2.0 * (depth + near.select(gain.max(zero), zero))).sqrt();
+    let excluded = clear.below(s * 0.98);
+    let cut = direct - (1.0 - excluded.select(clear / s, zero)).rough_ln();
     high = excluded.select(high.min(cut), high).min(rule.high);
     (low, high, start)
 }
@@ -179,6 +185,7 @@ struct Scan<S: Simd> {
     last: Lanes<S>,
     first_node: Lanes<S>,
     last_node: Lanes<S>,
+    deep_last: Lanes<S>,
     curvature: Lanes<S>,
     valley: Lanes<S>,
 }
@@ -196,12 +203,12 @@ fn scan<S: Simd, const M: usize, const DECLINE: bool, const LIMIT: bool>(
     let forward = s.max(zero);
     let backward = s.min(zero);
     let mut u = (-(low + stars.ln_error)).exp();
-    let shrink = (-step).exp();
+    let shrink = (-step).rough_exp();
     let mut t = zero;
     let mut grow = zero;
     if DECLINE {
-        t = (rule.alpha * (low - rule.ln_length)).exp();
-        grow = (rule.alpha * step).exp();
+        t = (rule.alpha * (low - rule.ln_length)).rough_exp();
+        grow = (rule.alpha * step).rough_exp();
     }
     let base = rule.power * low;
     let rise = rule.power * step;
@@ -228,6 +235,8 @@ fn scan<S: Simd, const M: usize, const DECLINE: bool, const LIMIT: bool>(
         top = top.max(value);
     }
     let floor = top - care.depth;
+    let deep = top - care.deep;
+    let far_floor = top - care.far_depth;
     let curved = top - care.curved;
     let mut scan = Scan {
         top,
@@ -235,6 +244,7 @@ fn scan<S: Simd, const M: usize, const DECLINE: bool, const LIMIT: bool>(
         last: zero,
         first_node: zero,
         last_node: zero,
+        deep_last: zero,
         curvature: zero,
         valley: s.like(M as f64),
     };
@@ -252,14 +262,15 @@ fn scan<S: Simd, const M: usize, const DECLINE: bool, const LIMIT: bool>(
         }
     }
     for j in 0..M {
-        let inside = floor.below(y[j]);
+        let inside = far_floor.below(y[j]);
         scan.last_node = inside.select(s.like(j as f64), scan.last_node);
+        scan.deep_last = deep.below(y[j]).select(s.like(j as f64), scan.deep_last);
         right_in = inside.select(y[j], right_in);
         right_out = inside.select(if j + 1 == M { zero } else { y[j + 1] }, right_out);
     }
     // crossings of the chords; at the ends of the scan there is no chord
     let left = ((left_in - floor) / (left_in - left_out)).clamp(0.0, 1.0);
-    let right = ((right_in - floor) / (right_in - right_out)).clamp(0.0, 1.0);
+    let right = ((right_in - far_floor) / (right_in - right_out)).clamp(0.0, 1.0);
     scan.first = (scan.first_node - left).max(zero);
     scan.last = s.like((M - 1) as f64 - 0.5).below(scan.last_node).select(scan.last_node, scan.last_node + right);
     scan
@@ -302,8 +313,8 @@ pub(super) fn locate<S: Simd, const M: usize, const DECLINE: bool, const LIMIT: 
     }
     let top = coarse.top.max(fine.top);
     let nodes = (located_high - located_low) * scale / care.step + 2.0;
-    let dip = fine.first_node.below(fine.valley).and(fine.valley.below(fine.last_node));
-    let dip = dip.or(coarse.first_node.below(coarse.valley).and(coarse.valley.below(coarse.last_node)));
+    let dip = [&coarse, &fine].map(|x| x.first_node.below(x.valley).and(x.valley.below(x.deep_last)));
+    let dip = dip[0].or(dip[1]);
     let unresolved = s.like(2.5).below(fine_step * scale);
     let doubtful = dip.or(unresolved).select(one, zero);
     Located { low: located_low, high: located_high, top, nodes, doubtful }
