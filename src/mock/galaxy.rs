@@ -34,8 +34,9 @@ pub fn densities(cos_l: f64, sin_b: f64, d: f64) -> [f64; COMPONENTS] {
     let along = d * (1.0 - sin_b * sin_b).max(0.0).sqrt();
     let radius2 = (SUN_RADIUS * SUN_RADIUS - 2.0 * SUN_RADIUS * along * cos_l + along * along).max(0.0);
     let radius = radius2.sqrt();
-    let z = (SUN_HEIGHT + d * sin_b).abs();
-    let disc = |(length, height): (f64, f64)| libm::exp((SUN_RADIUS - radius) / length - z / height);
+    let z = d * sin_b;
+    let above_plane = (z + SUN_HEIGHT).abs();
+    let disc = |(length, height): (f64, f64)| libm::exp((SUN_RADIUS - radius) / length - above_plane / height);
     let flattened = radius2 + (z / HALO_FLATTENING) * (z / HALO_FLATTENING) + HALO_CORE * HALO_CORE;
     let halo = libm::exp(0.5 * HALO_POWER * libm::log(SUN_RADIUS * SUN_RADIUS / flattened));
     [disc(THIN), THICK_SHARE * disc(THICK), HALO_SHARE * halo]
@@ -66,6 +67,7 @@ mod tests {
             let got = densities(libm::cos(l * crate::sky::RADIANS), libm::sin(b * crate::sky::RADIANS), d);
             assert!((got[0] / thin - 1.0).abs() < 1e-8, "{l} {b} {d}: {}", got[0]);
             assert!((got[1] / thick - 1.0).abs() < 1e-8, "{l} {b} {d}: {}", got[1]);
+            // share [R0^2 / s^2]^(n/2) gives s^2, to which the core is added.
             let reach2 = SUN_RADIUS * SUN_RADIUS * libm::pow(HALO_SHARE / halo, 2.0 / HALO_POWER);
             let cored = halo * libm::pow(reach2 / (reach2 + HALO_CORE * HALO_CORE), HALO_POWER / 2.0);
             assert!((got[2] / cored - 1.0).abs() < 1e-8, "{l} {b} {d}: {} {cored}", got[2]);

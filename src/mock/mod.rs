@@ -67,9 +67,9 @@ pub fn write(options: &Options, progress: &dyn Fn(u64)) -> Result<Summary> {
     let (files, plan) = targets(options)?;
     fs::create_dir_all(&options.out)
         .map_err(|e| Error::failed(format!("The folder for the mock cannot be made: {e}.")).in_file(&options.out))?;
-    let lattice = lattice::Lattice::new();
+    let sky = survey::Sky::new();
     let job = writer::Job {
-        lattice: &lattice,
+        sky: &sky,
         schema: std::sync::Arc::new(columns::schema(options.truth)),
         seed: options.seed,
         truth: options.truth,

@@ -7,7 +7,7 @@
 //!
 //! Units: deg, mas, mag, pc.
 
-use super::lattice::{Lattice, Placed};
+use super::lattice::{Lattice, NEARBY, Placed, WIDE};
 use super::random::{Draws, identifier};
 use super::stars::Star;
 use crate::sky::{galactic_to_icrs, longitude_latitude, sin_ecliptic_latitude};
@@ -19,6 +19,8 @@ pub const EXTINCTION_RATIOS: [f64; 3] = [1.0, 1.337, 0.751];
 pub const ERROR_SCALE: f64 = 1.05;
 pub const ERROR_FLOOR: f64 = 0.010;
 
+/// Share of the stars that the nearby programme asked for.
+const NEARBY_SHARE: f64 = 0.12;
 /// Share of badly fitted stars.
 const BAD_FITS: f64 = 0.004;
 /// Share of values that are NaN, in each of the columns that have some.
@@ -79,10 +81,24 @@ pub fn zero_point(g: f64, sin_beta: f64) -> f64 {
     by_magnitude + 0.005 * sin_beta + 0.009 * (sin_beta * sin_beta - 1.0 / 3.0)
 }
 
+/// The sky that the survey looks at.
+pub struct Sky {
+    wide: Lattice,
+    nearby: Lattice,
+}
+
+impl Sky {
+    /// Lays out both programmes.
+    pub fn new() -> Self {
+        Self { wide: Lattice::new(WIDE), nearby: Lattice::new(NEARBY) }
+    }
+}
+
 /// Observes the star of row `row`.
-pub fn observe(lattice: &Lattice, seed: u64, row: u64) -> Row {
+pub fn observe(sky: &Sky, seed: u64, row: u64) -> Row {
     let mut draws = Draws::of_row(seed, row);
-    let Placed { direction, distance, modulus, a_v, star } = lattice.draw(&mut draws);
+    let programme = if draws.chance(NEARBY_SHARE) { &sky.nearby } else { &sky.wide };
+    let Placed { direction, distance, modulus, a_v, star } = programme.draw(&mut draws);
     let icrs = galactic_to_icrs(direction);
     let (ra, dec) = longitude_latitude(icrs);
     let sin_beta = sin_ecliptic_latitude(icrs);
@@ -100,8 +116,8 @@ pub fn observe(lattice: &Lattice, seed: u64, row: u64) -> Row {
     let scatter = if bad { honest * 2.5 * fit_quality } else { honest };
     let parallax = round4(1000.0 / distance + zero_point + scatter * draws.normal());
 
-    // The chance to lack a value grows towards the limit of the survey: 0 for bright stars, 1 near G = 20.
-    let faint = ((apparent[0] - 15.0) / 5.0).clamp(0.0, 1.0);
+    // The chance to lack a value grows towards the limit of the survey: 0 for bright stars, 1 at its limit.
+    let faint = ((apparent[0] - 14.0) / 4.5).clamp(0.0, 1.0);
     let faint = faint * faint * faint;
     let solved = !draws.chance(0.001 + 0.012 * faint);
     let mut magnitudes = [None; 3];

@@ -19,13 +19,12 @@ use parquet::schema::types::ColumnPath;
 use rayon::prelude::*;
 
 use super::columns::arrays;
-use super::lattice::Lattice;
-use super::survey::observe;
+use super::survey::{Sky, observe};
 use crate::error::{Error, Result};
 
 /// What all files of one mock share.
 pub struct Job<'a> {
-    pub lattice: &'a Lattice,
+    pub sky: &'a Sky,
     pub schema: SchemaRef,
     pub seed: u64,
     pub truth: bool,
@@ -101,7 +100,7 @@ struct Encoded {
 
 fn encode(job: &Job, factory: &ArrowRowGroupWriterFactory, index: usize, rows: Range<u64>) -> ParquetResult<Encoded> {
     let count = rows.end - rows.start;
-    let made = (0..count as usize).map(|i| observe(job.lattice, job.seed, rows.start + i as u64));
+    let made = (0..count as usize).map(|i| observe(job.sky, job.seed, rows.start + i as u64));
     let arrays = arrays(made, job.truth);
     let writers = factory.create_column_writers(index)?;
     let mut chunks = Vec::with_capacity(arrays.len());
