@@ -111,7 +111,11 @@ def test_row_groups_have_sound_statistics(hipparcos_release):
                 if statistics is None or not statistics.has_min_max:
                     continue
                 values = rows[chunk.path_in_schema].drop_null().to_numpy()
-                assert statistics.min <= np.min(values) and statistics.max >= np.max(values), (part, group, chunk.path_in_schema)
+                assert statistics.min <= np.min(values) and statistics.max >= np.max(values), (
+                    part,
+                    group,
+                    chunk.path_in_schema,
+                )
 
 
 def test_tables_are_also_csv(hipparcos_release):
@@ -124,6 +128,11 @@ def test_tables_are_also_csv(hipparcos_release):
         assert text.height == parquet.height, path.name
         for name in parquet.columns:
             if parquet[name].dtype.is_numeric():
-                np.testing.assert_array_equal(text[name].cast(pl.Float64), parquet[name].cast(pl.Float64), f"{path.name} {name}")
+                np.testing.assert_array_equal(
+                    text[name].cast(pl.Float64), parquet[name].cast(pl.Float64), f"{path.name} {name}"
+                )
             else:
-                assert text[name].cast(pl.String).to_list() == parquet[name].cast(pl.String).to_list(), (path.name, name)
+                assert text[name].cast(pl.String).to_list() == parquet[name].cast(pl.String).to_list(), (
+                    path.name,
+                    name,
+                )
