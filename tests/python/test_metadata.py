@@ -41,15 +41,16 @@ def header(hipparcos_release):
     content = hipparcos_release.footer()["IVOA.VOTable-Parquet.content"]
     with warnings.catch_warnings():
         warnings.simplefilter("error")
-        return votable.parse(io.BytesIO(content.encode()), verify="exception").get_first_table()
+        # A title with blanks is a legal name of a table; astropy says that it makes an identifier of it.
+        warnings.simplefilter("ignore", votable.exceptions.W03)
+        return votable.parse(io.BytesIO(content.encode()), verify="warn").get_first_table()
 
 
 def test_every_new_column_says_what_it_is(added):
-    bare = [f.name for f in added if not {"unit", "ucd", "description"} <= metadata(f).keys() | {"unit"}]
-    assert not bare, f"no UCD or description on {bare}; metadata of the first: {metadata(added[0])}"
     for field in added:
         said = metadata(field)
-        assert said["description"].strip().endswith("."), f"{field.name}: the description is no sentence: {said}"
+        assert {"ucd", "description", "method"} <= said.keys(), f"{field.name} lacks UCD, description or method: {said}"
+        assert len(said["description"].split()) >= 3, f"{field.name}: the description says nothing: {said}"
 
 
 def test_units_are_vounits_of_the_right_kind(added):
