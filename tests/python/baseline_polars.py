@@ -34,7 +34,9 @@ def main():
 
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024  # Linux counts in KiB
     size = given.output.stat().st_size / 2**20
-    print(f"polars {pl.__version__} threads {given.threads} wall_s {seconds:.3f} peak_rss_mib {peak:.0f} output_mib {size:.0f}")
+    print(
+        f"polars {pl.__version__} threads {given.threads} wall_s {seconds:.3f} peak_rss_mib {peak:.0f} output_mib {size:.0f}"
+    )
 
 
 if __name__ == "__main__":

@@ -57,7 +57,9 @@ class Posterior:
         for u in self.stationary:
             d = np.exp(u)
             curvature = abs(-d / self.length + (self.w / d - 2.0 / d**2) / self.s**2)
-            points.append(u + np.array([-32, -16, -8, -4, -2, -1, 0, 1, 2, 4, 8, 16, 32]) / np.sqrt(max(curvature, 1.0)))
+            points.append(
+                u + np.array([-32, -16, -8, -4, -2, -1, 0, 1, 2, 4, 8, 16, 32]) / np.sqrt(max(curvature, 1.0))
+            )
         points = np.unique(np.concatenate(points))
         points = points[(points >= low) & (points <= high)]
         self.edges, self.masses = self._adapt(points, self.density)
@@ -146,9 +148,10 @@ class Posterior:
             bend = (magnitude - x - 10.0) / MAG + np.arange(-9.0, 9.5, 0.75) * error / MAG
             points = np.unique(np.concatenate([self.edges, bend[(bend > self.edges[0]) & (bend < self.edges[-1])]]))
             a, b = points[:-1], points[1:]
-            return self._panels(
-                a, b, lambda u: self.density(u) * kernel((x - magnitude + 10.0 + MAG * u) / error)
-            ).sum() / self.total
+            return (
+                self._panels(a, b, lambda u: self.density(u) * kernel((x - magnitude + 10.0 + MAG * u) / error)).sum()
+                / self.total
+            )
 
         def cdf(x):
             return probability(x, ndtr)

@@ -41,15 +41,16 @@ def header(hipparcos_release):
     content = hipparcos_release.footer()["IVOA.VOTable-Parquet.content"]
     with warnings.catch_warnings():
         warnings.simplefilter("error")
-        return votable.parse(io.BytesIO(content.encode()), verify="exception").get_first_table()
+        # A title with blanks is a legal name of a table; astropy says that it makes an identifier of it.
+        warnings.simplefilter("ignore", votable.exceptions.W03)
+        return votable.parse(io.BytesIO(content.encode()), verify="warn").get_first_table()
 
 
 def test_every_new_column_says_what_it_is(added):
-    bare = [f.name for f in added if not {"unit", "ucd", "description"} <= metadata(f).keys() | {"unit"}]
-    assert not bare, f"no UCD or description on {bare}; metadata of the first: {metadata(added[0])}"
     for field in added:
         said = metadata(field)
-        assert said["description"].strip().endswith("."), f"{field.name}: the description is no sentence: {said}"
+        assert {"ucd", "description", "method"} <= said.keys(), f"{field.name} lacks UCD, description or method: {said}"
+        assert len(said["description"].split()) >= 3, f"{field.name}: the description says nothing: {said}"
 
 
 def test_units_are_vounits_of_the_right_kind(added):
@@ -111,7 +112,11 @@ def test_row_groups_have_sound_statistics(hipparcos_release):
                 if statistics is None or not statistics.has_min_max:
                     continue
                 values = rows[chunk.path_in_schema].drop_null().to_numpy()
-                assert statistics.min <= np.min(values) and statistics.max >= np.max(values), (part, group, chunk.path_in_schema)
+                assert statistics.min <= np.min(values) and statistics.max >= np.max(values), (
+                    part,
+                    group,
+                    chunk.path_in_schema,
+                )
 
 
 def test_tables_are_also_csv(hipparcos_release):
@@ -124,6 +129,11 @@ def test_tables_are_also_csv(hipparcos_release):
         assert text.height == parquet.height, path.name
         for name in parquet.columns:
             if parquet[name].dtype.is_numeric():
-                np.testing.assert_array_equal(text[name].cast(pl.Float64), parquet[name].cast(pl.Float64), f"{path.name} {name}")
+                np.testing.assert_array_equal(
+                    text[name].cast(pl.Float64), parquet[name].cast(pl.Float64), f"{path.name} {name}"
+                )
             else:
-                assert text[name].cast(pl.String).to_list() == parquet[name].cast(pl.String).to_list(), (path.name, name)
+                assert text[name].cast(pl.String).to_list() == parquet[name].cast(pl.String).to_list(), (
+                    path.name,
+                    name,
+                )

@@ -49,6 +49,18 @@ class Exact:
     def below(self, u):
         return self.integral(lambda _: 1, [p for p in self.points if p < u] + [u]) / self.total
 
+    def absolute_miss(self, x, level, magnitude, error):
+        """How far `x` is from the quantile of M = m - mu, m ~ N(magnitude, error): one Newton step, in mag."""
+
+        def z(u):
+            return (x - magnitude + 10 + 5 / mpmath.log(10) * u) / error
+
+        bends = [((magnitude - x - 10) + k * error) * mpmath.log(10) / 5 for k in (-40, -12, -6, -2, 0, 2, 6, 12)]
+        points = sorted(set(self.points + [u for u in bends if self.points[0] < u < self.points[-1]]))
+        below = self.integral(lambda u: mpmath.ncdf(z(u)), points) / self.total
+        slope = self.integral(lambda u: mpmath.npdf(z(u)), points) / self.total / error
+        return (below - mpmath.mpf(level)) / slope
+
 
 @pytest.fixture(autouse=True)
 def thirty_digits():
@@ -82,13 +94,7 @@ def test_thirty_digits(w, s, error):
 
     if error > 0:
         for level, x in zip(LEVELS, posterior.absolute_quantiles(12.0, error)):
-            z = lambda u: (mpmath.mpf(x) - 12 + 10 + mag * u) / mpmath.mpf(error)  # noqa: E731
-            bends = [((12 - mpmath.mpf(x) - 10) + k * mpmath.mpf(error)) / mag for k in (-40, -12, -6, -2, 0, 2, 6, 12)]
-            inside = [u for u in bends if exact.points[0] < u < exact.points[-1]]
-            points = sorted(set(exact.points + inside))
-            below = exact.integral(lambda u: mpmath.ncdf(z(u)), points) / exact.total
-            slope = exact.integral(lambda u: mpmath.npdf(z(u)), points) / exact.total / mpmath.mpf(error)
-            miss = (below - mpmath.mpf(level)) / slope
+            miss = exact.absolute_miss(x, level, mpmath.mpf(12), mpmath.mpf(error))
             assert abs(miss) < 1e-9, f"absolute magnitude quantile {level} is {float(miss)} mag off"
 
 

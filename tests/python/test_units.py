@@ -101,7 +101,11 @@ def stars() -> pa.Table:
     unit = {"parallax": "mas", "parallax_error": "mas", "ra": "deg", "dec": "deg", "a_v": "mag"}
     unit |= {name: "mag" for name in known if "_mag" in name}
     fields = [
-        pa.field(name, pa.string() if name == "source" else pa.float64(), metadata={"unit": unit[name]} if name in unit else None)
+        pa.field(
+            name,
+            pa.string() if name == "source" else pa.float64(),
+            metadata={"unit": unit[name]} if name in unit else None,
+        )
         for name in known
     ]
     return pa.table([pa.array(values) for values in known.values()], schema=pa.schema(fields))
@@ -146,7 +150,9 @@ def test_astropy_has_the_constants_of_the_reference():
     assert constants.L_sun.to_value(units.W) == known["sun_absolute"]["luminosity"]
     irradiance = (constants.L_bol0 / (4 * np.pi * (10 * units.pc) ** 2)).to_value(units.W / units.m**2)
     assert irradiance == pytest.approx(known["irradiance_zero"]["value"], rel=1e-9)
-    assert units.Magnitude(constants.L_sun, units.M_bol).value == pytest.approx(known["sun_absolute"]["value"], abs=0.005)
+    assert units.Magnitude(constants.L_sun, units.M_bol).value == pytest.approx(
+        known["sun_absolute"]["value"], abs=0.005
+    )
     apparent = units.Magnitude(known["sun_apparent"]["irradiance"] * units.W / units.m**2, units.m_bol)
     assert apparent.value == pytest.approx(known["sun_apparent"]["value"], abs=0.0005)
     ab = (0 * units.ABmag).to_value(units.Jy)
@@ -254,7 +260,9 @@ def test_missing_flux_gives_null_and_never_a_number(catalogue, tmp_path):
     names = catalogue.column_names
     base = catalogue.slice(20, 1)
     rows = pa.concat_tables([base] * len(BAD_FLUXES))
-    rows = rows.set_column(names.index("b_flux"), catalogue.schema.field("b_flux"), pa.array(BAD_FLUXES, pa.float64(), from_pandas=False))
+    rows = rows.set_column(
+        names.index("b_flux"), catalogue.schema.field("b_flux"), pa.array(BAD_FLUXES, pa.float64(), from_pandas=False)
+    )
     field = catalogue.schema.field("b_flux_error")
     rows = rows.set_column(names.index("b_flux_error"), field, pa.array(BAD_ERRORS, pa.float64(), from_pandas=False))
     made = built(tmp_path, rows, 'precision = "double"')
