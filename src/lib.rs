@@ -10,3 +10,5 @@
 
 pub mod error;
 pub mod frame;
+pub mod numerics;
+pub mod posterior;

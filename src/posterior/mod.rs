@@ -1,0 +1,99 @@
+//! The posterior of the distance modulus: Gaussian parallax likelihood times a stated prior on the distance.
+//!
+//! For parallax w and error s (mas) and distance d (kpc): p(d) ~ prior(d) exp(-(w - 1/d)^2 / (2 s^2)), carried over to the
+//! modulus mu = 5 log10(d / 10 pc) (Bailer-Jones 2015, PASP 127, 994; Luri et al. 2018, A&A 616, A9). Nothing is sampled and
+//! nothing is iterated to a tolerance: quantiles, mean and standard deviation come from a trapezoidal sum over an interval
+//! that is found first (`locate`), with closed-form local series (`local`, `integrate`).
+//!
+//! Accuracy: 1e-6 mag or better for parallax/error from -20 to 1e6, errors from 1e-4 to 1e2 mas and lengths from 0.02 to
+//! 100 kpc (tests/reference/posterior_values.py). Beyond: errors are taken as at least 1e-9 and at most 1e9 mas and at
+//! least 1e-7 of a positive parallax; results stay finite and ordered.
+//! Missing input (NaN or infinite parallax or error, error not positive) gives NaN.
+//!
+//! Same bits everywhere: a row's result depends on the row and the prior alone. Rows are computed side by side in SIMD
+//! lanes, but no lane ever looks at another.
+
+use pulp::{Arch, WithSimd};
+
+mod bands;
+mod batch;
+mod convolve;
+mod integrate;
+mod local;
+mod locate;
+mod mode;
+pub mod prior;
+pub mod shape;
+
+use batch::{CHUNK, Task};
+pub use prior::Prior;
+
+/// 5 / ln 10: magnitudes of modulus for a unit of ln d.
+pub const MAGNITUDES_PER_LN: f64 = 2.171_472_409_516_258_5;
+/// Number of outputs for the modulus: p16, p50, p84, mode, mean, standard deviation (mag), prior share.
+pub const MODULUS_OUTPUTS: usize = 7;
+/// Number of outputs a band: absolute magnitude p16, p50, p84.
+pub const BAND_OUTPUTS: usize = 3;
+/// Quantile levels: Phi(-1), 1/2, Phi(1).
+pub const LEVELS: [f64; 3] = [0.158_655_253_931_457_07, 0.5, 0.841_344_746_068_542_9];
+
+/// Photometry in one band, a value a row.
+#[derive(Debug, Clone, Copy)]
+pub struct Photometry<'a> {
+    /// Apparent magnitude less extinction, mag.
+    pub apparent: &'a [f64],
+    /// Its standard error, mag; 0 is allowed.
+    pub error: &'a [f64],
+}
+
+/// Reusable scratch; one a thread.
+#[derive(Debug, Default)]
+pub struct Workspace {
+    columns: Vec<f64>,
+    order: Vec<u32>,
+    class: Vec<u8>,
+    nodes: Vec<f64>,
+    narrow: bool,
+}
+
+impl Workspace {
+    /// Empty scratch; grows on first use to about 200 kB.
+    pub fn new() -> Self {
+        Self::default()
+    }
+
+    /// Scratch that makes the kernel run without SIMD instructions: slower, same bits (tests compare the two).
+    pub fn scalar() -> Self {
+        Self { narrow: true, ..Self::default() }
+    }
+}
+
+/// Posterior summaries of `rows` stars.
+///
+/// `parallax` and `error` in mas and every band's columns are `rows` long; `out` holds [`MODULUS_OUTPUTS`] columns (modulus
+/// p16, p50, p84, mode, mean, standard deviation in mag, prior share) and then [`BAND_OUTPUTS`] columns a band (absolute
+/// magnitude p16, p50, p84), each `rows` long. The mode is the global maximum of the density **in distance**, expressed as
+/// a modulus. The prior share is the posterior variance of the modulus over the prior's, at most 1.
+pub fn summarise(
+    prior: &Prior,
+    parallax: &[f64],
+    error: &[f64],
+    bands: &[Photometry<'_>],
+    out: &mut [&mut [f64]],
+    scratch: &mut Workspace,
+) {
+    let shape = prior.shape();
+    let variance = prior.modulus_variance();
+    let rows = parallax.len();
+    let mut start = 0;
+    while start < rows {
+        let end = rows.min(start + CHUNK);
+        let task = Task { shape: &shape, variance, start, end, parallax, error, bands, out, scratch };
+        if task.scratch.narrow {
+            task.with_simd(pulp::Scalar256b);
+        } else {
+            Arch::new().dispatch(task);
+        }
+        start = end;
+    }
+}
