@@ -8,6 +8,7 @@
 //! - **Cornish-Fisher expansion** to sixth order (Cornish & Fisher 1938, Rev. Inst. Int. Stat. 5, 307; coefficients derived
 //!   anew at z = 0 and z = 1 by inverting the Edgeworth series in rational arithmetic), on the posterior's cumulants, the
 //!   second increased by v.
+//!
 //! Each is used only where its last term shows it converged; the remainder goes to `convolve`, which is slower and always
 //! good. Which route a row takes depends on the row alone.
 
@@ -82,8 +83,8 @@ pub(super) fn cumulants<S: Simd>(sums: &[Lanes<S>; 9], step: Lanes<S>) -> [Lanes
     let k5 = m5 - m3 * m2 * 10.0;
     let k6 = m6 - m4 * m2 * 15.0 - m33 * 10.0 + m22 * m2 * 30.0;
     let k7 = m7 - m5 * m2 * 21.0 - m4 * m3 * 35.0 + m3 * m22 * 210.0;
-    let k8 = m8 - m6 * m2 * 28.0 - m5 * m3 * 56.0 - m4 * m4 * 35.0 + m4 * m22 * 420.0 + m33 * m2 * 560.0
-        - m22 * m22 * 630.0;
+    let k8 =
+        m8 - m6 * m2 * 28.0 - m5 * m3 * 56.0 - m4 * m4 * 35.0 + m4 * m22 * 420.0 + m33 * m2 * 560.0 - m22 * m22 * 630.0;
     let mut out = [m2, m3, k4, k5, k6, k7, k8];
     let mut unit = step;
     for k in &mut out {

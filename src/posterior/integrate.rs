@@ -9,9 +9,10 @@
 
 use pulp::Simd;
 
-use super::{LEVELS, WIDEST, bands};
+use super::batch::WIDEST;
 use super::local::{self, Point, Scale};
 use super::locate::{Rule, Stars};
+use super::{LEVELS, bands};
 use crate::numerics::lanes::Lanes;
 
 /// Scratch for the cumulative sums and the two recurrences.

@@ -35,12 +35,7 @@ pub(super) struct Scale<S: Simd> {
 impl<S: Simd> Scale<S> {
     #[inline(always)]
     pub fn new<const DECLINE: bool>(signal: Lanes<S>, power: Lanes<S>, alpha: Lanes<S>, step: Lanes<S>) -> Self {
-        let mut scale = Self {
-            signal,
-            power: power * step,
-            step: [step; ORDERS - 1],
-            decline: [step; ORDERS - 1],
-        };
+        let mut scale = Self { signal, power: power * step, step: [step; ORDERS - 1], decline: [step; ORDERS - 1] };
         for n in 1..ORDERS - 1 {
             scale.step[n] = scale.step[n - 1] * step * (1.0 / n as f64);
         }

@@ -1,0 +1,375 @@
+//! A chunk of rows through the kernel: prepare, locate, sort into classes of equal node counts, integrate, hand out.
+//!
+//! Rows are laid side by side in lanes only with rows of the same class, so that the number of nodes a row gets is a matter
+//! of that row alone; results go back to the row's place.
+
+use std::ops::Range;
+
+use pulp::{Simd, WithSimd};
+
+use super::integrate::{Nodes, Summary, integrate};
+use super::locate::{self, PLAIN, Rule, Stars, WIDE, locate};
+use super::shape::Shape;
+use super::{BAND_OUTPUTS, MAGNITUDES_PER_LN, MODULUS_OUTPUTS, Photometry, Workspace, bands, convolve, mode};
+use crate::numerics::lanes::Lanes;
+
+/// Rows taken together; large enough that rows of one class fill the lanes, small enough to stay in the first cache.
+pub(super) const CHUNK: usize = 512;
+/// Numbers of nodes; a row takes the smallest that suffices.
+const CLASSES: [usize; 18] = [16, 18, 20, 22, 24, 28, 32, 40, 48, 64, 96, 128, 192, 256, 384, 512, 1024, 2048];
+/// Widest lanes.
+pub(super) const WIDEST: usize = 8;
+
+/// Columns of a chunk in `Workspace::columns`.
+#[derive(Clone, Copy)]
+#[repr(usize)]
+enum Column {
+    Signal,
+    LnError,
+    Low,
+    High,
+    Top,
+    Nodes,
+    Doubtful,
+    P16,
+    P50,
+    P84,
+    Mode,
+    Mean,
+    Variance,
+    Restless,
+    Edge,
+    /// 3 levels times 4 terms
+    Heat,
+    Cumulants = Column::Heat as usize + 12,
+    BandSd = Column::Cumulants as usize + 7,
+    /// 3 levels
+    Band,
+    Count = Column::Band as usize + 3,
+}
+
+/// One chunk.
+pub(super) struct Task<'a, 'b, 'c> {
+    pub shape: &'a Shape,
+    pub variance: f64,
+    pub start: usize,
+    pub end: usize,
+    pub parallax: &'a [f64],
+    pub error: &'a [f64],
+    pub bands: &'a [Photometry<'a>],
+    pub out: &'a mut [&'c mut [f64]],
+    pub scratch: &'b mut Workspace,
+}
+
+impl WithSimd for Task<'_, '_, '_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn with_simd<S: Simd>(self, simd: S) {
+        if S::F64_LANES == 1 {
+            // 32-bit words of a lane cannot be addressed there
+            return self.with_simd(pulp::Scalar256b);
+        }
+        match (self.shape.decline.is_some(), self.shape.high.is_finite(), self.bands.is_empty()) {
+            (true, false, true) => self.run::<S, true, false, false>(simd),
+            (true, false, false) => self.run::<S, true, false, true>(simd),
+            (true, true, true) => self.run::<S, true, true, false>(simd),
+            (true, true, false) => self.run::<S, true, true, true>(simd),
+            (false, _, true) => self.run::<S, false, true, false>(simd),
+            (false, _, false) => self.run::<S, false, true, true>(simd),
+        }
+    }
+}
+
+fn valid(parallax: f64, error: f64) -> bool {
+    parallax.is_finite() && error.is_finite() && error > 0.0
+}
+
+impl Task<'_, '_, '_> {
+    #[expect(clippy::needless_range_loop, reason = "one index walks several columns")]
+    #[inline(always)]
+    fn run<S: Simd, const DECLINE: bool, const LIMIT: bool, const BANDS: bool>(self, simd: S) {
+        let rows = self.end - self.start;
+        let padded = rows.next_multiple_of(WIDEST);
+        let width = S::F64_LANES;
+        let Workspace { columns, order, class, nodes, .. } = self.scratch;
+        columns.resize(CHUNK * Column::Count as usize, 0.0);
+        let mut columns: Vec<&mut [f64]> = columns.chunks_exact_mut(CHUNK).collect();
+        for i in 0..padded {
+            let row = self.start + i.min(rows - 1);
+            let (mut w, mut s) = (self.parallax[row], self.error[row]);
+            if !valid(w, s) {
+                (w, s) = (1.0, 1.0);
+            }
+            s = s.clamp(1e-9, 1e9).max(w * 1e-7);
+            columns[Column::Signal as usize][i] = (w / s).max(-1e9);
+            columns[Column::LnError as usize][i] = s;
+        }
+        let plain = Rule::new(simd, self.shape, PLAIN.depth);
+        for i in (0..padded).step_by(width) {
+            let at = i..i + width;
+            let ln_error = Lanes::load(simd, &columns[Column::LnError as usize][at.clone()]).ln();
+            ln_error.store(&mut columns[Column::LnError as usize][at.clone()]);
+            let signal = Lanes::load(simd, &columns[Column::Signal as usize][at.clone()]);
+            let stars = Stars { signal, ln_error };
+            let found = locate::<S, 16, DECLINE, LIMIT>(&stars, &plain, &PLAIN);
+            found.low.store(&mut columns[Column::Low as usize][at.clone()]);
+            found.high.store(&mut columns[Column::High as usize][at.clone()]);
+            found.top.store(&mut columns[Column::Top as usize][at.clone()]);
+            found.nodes.store(&mut columns[Column::Nodes as usize][at.clone()]);
+            found.doubtful.store(&mut columns[Column::Doubtful as usize][at]);
+        }
+        order.clear();
+        order.extend((0..rows as u32).filter(|&i| columns[Column::Doubtful as usize][i as usize] > 0.0));
+        let wide = Rule::new(simd, self.shape, WIDE.depth);
+        for group in order.chunks(width) {
+            let stars = Stars {
+                signal: gather(simd, columns[Column::Signal as usize], group),
+                ln_error: gather(simd, columns[Column::LnError as usize], group),
+            };
+            let found = simd.vectorize(Careful::<S, DECLINE, LIMIT> { stars, rule: wide });
+            for (column, lanes) in [
+                (Column::Low, found.low),
+                (Column::High, found.high),
+                (Column::Top, found.top),
+                (Column::Nodes, found.nodes),
+            ] {
+                scatter(lanes, columns[column as usize], group);
+            }
+        }
+
+        // rows of a class side by side
+        class.resize(CHUNK, 0);
+        let mut sizes = [0usize; CLASSES.len()];
+        for i in 0..rows {
+            let needed = columns[Column::Nodes as usize][i];
+            let c = CLASSES.iter().position(|&n| n as f64 >= needed).unwrap_or(CLASSES.len() - 1);
+            class[i] = c as u8;
+            sizes[c] += 1;
+        }
+        let mut starts = [0usize; CLASSES.len()];
+        for c in 1..CLASSES.len() {
+            starts[c] = starts[c - 1] + sizes[c - 1];
+        }
+        order.resize(rows, 0);
+        let mut next = starts;
+        for i in 0..rows {
+            let c = class[i] as usize;
+            order[next[c]] = i as u32;
+            next[c] += 1;
+        }
+        nodes.resize(CLASSES[CLASSES.len() - 1] * WIDEST * 3, 0.0);
+        for c in 0..CLASSES.len() {
+            let count = CLASSES[c];
+            for group in order[starts[c]..next[c]].chunks(width) {
+                let [low, high, top] = [Column::Low, Column::High, Column::Top]
+                    .map(|column| gather(simd, columns[column as usize], group));
+                let stars = Stars {
+                    signal: gather(simd, columns[Column::Signal as usize], group),
+                    ln_error: gather(simd, columns[Column::LnError as usize], group),
+                };
+                let (sum, rest) = S::as_mut_simd_f64s(nodes).0.split_at_mut(count);
+                let (u, rest) = rest.split_at_mut(count);
+                let buffers = Nodes { sum, u, t: &mut rest[..count] };
+                let Summary { quantiles, mode, mean, variance, restless, edge, heat, cumulants } =
+                    integrate::<S, DECLINE, LIMIT, BANDS>(&stars, &plain, low, high, top, buffers);
+                for (column, lanes) in [
+                    (Column::P16, quantiles[0]),
+                    (Column::P50, quantiles[1]),
+                    (Column::P84, quantiles[2]),
+                    (Column::Mode, mode),
+                    (Column::Mean, mean),
+                    (Column::Variance, variance),
+                    (Column::Restless, restless),
+                ] {
+                    scatter(lanes, columns[column as usize], group);
+                }
+                if BANDS {
+                    scatter(edge, columns[Column::Edge as usize], group);
+                    for (k, lanes) in heat.into_iter().flatten().enumerate() {
+                        scatter(lanes, columns[Column::Heat as usize + k], group);
+                    }
+                    for (k, lanes) in cumulants.into_iter().enumerate() {
+                        scatter(lanes, columns[Column::Cumulants as usize + k], group);
+                    }
+                }
+            }
+        }
+
+        for i in 0..rows {
+            if columns[Column::Restless as usize][i] > 0.0 {
+                let [signal, ln_error, low, high] = [Column::Signal, Column::LnError, Column::Low, Column::High]
+                    .map(|column| columns[column as usize][i]);
+                columns[Column::Mode as usize][i] = mode::search(self.shape, signal, ln_error, low, high);
+            }
+            let row = self.start + i;
+            let known = valid(self.parallax[row], self.error[row]);
+            let value = |column: Column| if known { columns[column as usize][i] } else { f64::NAN };
+            let modulus = |x: f64| MAGNITUDES_PER_LN * x + 10.0;
+            let variance = MAGNITUDES_PER_LN * MAGNITUDES_PER_LN * value(Column::Variance).max(0.0);
+            let results = [
+                modulus(value(Column::P16)),
+                modulus(value(Column::P50)),
+                modulus(value(Column::P84)),
+                modulus(value(Column::Mode)),
+                modulus(value(Column::Mean)),
+                if known { variance.sqrt() } else { f64::NAN },
+                if known { (variance / self.variance).min(1.0) } else { f64::NAN },
+            ];
+            for (column, result) in self.out.iter_mut().zip(results) {
+                column[row] = result;
+            }
+        }
+        if !BANDS {
+            return;
+        }
+        for (index, band) in self.bands.iter().enumerate() {
+            order.clear();
+            for i in (0..padded).step_by(width) {
+                let mut sd = [0.0; WIDEST];
+                for lane in 0..width {
+                    let error = band.error[self.start + (i + lane).min(rows - 1)];
+                    sd[lane] = if known_error(error) { error / MAGNITUDES_PER_LN } else { 0.0 };
+                }
+                let sd = Lanes::load(simd, &sd[..width]);
+                let slow = quick_bands(simd, sd, &mut columns, i..i + width);
+                let mut slow_rows = [0.0; WIDEST];
+                slow.store(&mut slow_rows[..width]);
+                order.extend((i..rows.min(i + width)).filter(|&k| slow_rows[k - i] > 0.0).map(|k| k as u32));
+            }
+            // nodes must resolve the photometric error too; rows of a class side by side
+            for &i in order.iter() {
+                let i = i as usize;
+                let range = columns[Column::High as usize][i] - columns[Column::Low as usize][i];
+                let sd = columns[Column::BandSd as usize][i];
+                let needed = columns[Column::Nodes as usize][i].max(range / (0.8 * sd) + 2.0);
+                class[i] = CLASSES.iter().position(|&n| n as f64 >= needed).unwrap_or(CLASSES.len() - 1) as u8;
+            }
+            order.sort_by_key(|&i| class[i as usize]);
+            for same in order.chunk_by(|&a, &b| class[a as usize] == class[b as usize]) {
+                let count = CLASSES[class[same[0] as usize] as usize];
+                for group in same.chunks(width) {
+                    let column = |k: usize| gather(simd, columns[k], group);
+                    let stars =
+                        Stars { signal: column(Column::Signal as usize), ln_error: column(Column::LnError as usize) };
+                    let (sum, rest) = S::as_mut_simd_f64s(nodes).0.split_at_mut(count);
+                    let (u, rest) = rest.split_at_mut(count);
+                    let buffers = Nodes { sum, u, t: &mut rest[..count] };
+                    let [low, high, top] = [Column::Low, Column::High, Column::Top].map(|c| column(c as usize));
+                    let sd = column(Column::BandSd as usize);
+                    let guess: [Lanes<S>; 3] = std::array::from_fn(|k| column(Column::Band as usize + k));
+                    let task =
+                        Thorough::<S, DECLINE, LIMIT> { stars, rule: plain, low, high, top, sd, guess, nodes: buffers };
+                    for (k, lanes) in simd.vectorize(task).into_iter().enumerate() {
+                        scatter(lanes, columns[Column::Band as usize + k], group);
+                    }
+                }
+            }
+            let out = &mut self.out[MODULUS_OUTPUTS + index * BAND_OUTPUTS..][..BAND_OUTPUTS];
+            for i in 0..rows {
+                let row = self.start + i;
+                let apparent = band.apparent[row];
+                let known =
+                    valid(self.parallax[row], self.error[row]) && apparent.is_finite() && known_error(band.error[row]);
+                for (level, column) in out.iter_mut().enumerate() {
+                    // a large modulus is a bright absolute magnitude: levels swap
+                    let modulus = MAGNITUDES_PER_LN * columns[Column::Band as usize + 2 - level][i] + 10.0;
+                    column[row] = if known { apparent - modulus } else { f64::NAN };
+                }
+            }
+        }
+    }
+}
+
+/// Photometric errors that can be: from 0 to 1000 mag.
+fn known_error(error: f64) -> bool {
+    (0.0..=1e3).contains(&error)
+}
+
+/// Convolved quantiles by the fast routes into the `Band` columns; where neither holds, 1 is returned and a guess stored.
+#[inline(always)]
+fn quick_bands<S: Simd>(simd: S, sd: Lanes<S>, columns: &mut [&mut [f64]], at: Range<usize>) -> Lanes<S> {
+    let zero = sd.like(0.0);
+    let one = sd.like(1.0);
+    let column = |k: usize| Lanes::load(simd, &columns[k][at.clone()]);
+    let variance = sd * sd;
+    let edge = column(Column::Edge as usize);
+    let mut cumulants: [Lanes<S>; 7] = std::array::from_fn(|k| column(Column::Cumulants as usize + k));
+    let own_sd = cumulants[0].max(zero).sqrt();
+    cumulants[0] = cumulants[0] + variance;
+    let widened = cumulants[0].max(zero).sqrt() - own_sd;
+    let (expansion, expansion_good) = bands::cornish_fisher(column(Column::Mean as usize), &cumulants);
+    let expansion_good = zero.below(expansion_good).and(sd.like(1e8).below(edge));
+    let mut values = expansion;
+    let mut slow = zero;
+    for level in 0..3 {
+        let quantile = column(Column::P16 as usize + level);
+        let series: [Lanes<S>; 4] = std::array::from_fn(|k| column(Column::Heat as usize + 4 * level + k));
+        let (by_heat, heat_good) = bands::heat(quantile, &series, variance);
+        let clear = (quantile + sd * 6.5).below(edge);
+        let heat_good = zero.below(heat_good).and(clear).or(sd.at_most(zero));
+        let guess = quantile + widened * (level as f64 - 1.0);
+        values[level] = heat_good.select(by_heat, expansion_good.select(expansion[level], guess));
+        slow = heat_good.or(expansion_good).select(slow, one);
+    }
+    sd.store(&mut columns[Column::BandSd as usize][at.clone()]);
+    for (k, value) in values.into_iter().enumerate() {
+        value.store(&mut columns[Column::Band as usize + k][at.clone()]);
+    }
+    slow
+}
+
+/// The convolution by quadrature; kept out of the main loop's code.
+struct Thorough<'a, S: Simd, const DECLINE: bool, const LIMIT: bool> {
+    stars: Stars<S>,
+    rule: Rule<S>,
+    low: Lanes<S>,
+    high: Lanes<S>,
+    top: Lanes<S>,
+    sd: Lanes<S>,
+    guess: [Lanes<S>; 3],
+    nodes: Nodes<'a, S>,
+}
+
+impl<S: Simd, const DECLINE: bool, const LIMIT: bool> WithSimd for Thorough<'_, S, DECLINE, LIMIT> {
+    type Output = [Lanes<S>; 3];
+
+    #[inline(always)]
+    fn with_simd<T: Simd>(self, _: T) -> Self::Output {
+        let Self { stars, rule, low, high, top, sd, guess, nodes } = self;
+        convolve::convolved::<S, DECLINE, LIMIT>(&stars, &rule, low, high, top, sd, guess, nodes)
+    }
+}
+
+/// A second, careful look; kept out of the main loop's code.
+struct Careful<S: Simd, const DECLINE: bool, const LIMIT: bool> {
+    stars: Stars<S>,
+    rule: Rule<S>,
+}
+
+impl<S: Simd, const DECLINE: bool, const LIMIT: bool> WithSimd for Careful<S, DECLINE, LIMIT> {
+    type Output = locate::Located<S>;
+
+    #[inline(always)]
+    fn with_simd<T: Simd>(self, _: T) -> Self::Output {
+        locate::<S, 96, DECLINE, LIMIT>(&self.stars, &self.rule, &WIDE)
+    }
+}
+
+#[inline(always)]
+fn gather<S: Simd>(simd: S, from: &[f64], rows: &[u32]) -> Lanes<S> {
+    let mut buffer = [0.0; WIDEST];
+    for lane in 0..S::F64_LANES {
+        buffer[lane] = from[rows[lane.min(rows.len() - 1)] as usize];
+    }
+    Lanes::load(simd, &buffer[..S::F64_LANES])
+}
+
+#[inline(always)]
+fn scatter<S: Simd>(lanes: Lanes<S>, to: &mut [f64], rows: &[u32]) {
+    let mut buffer = [0.0; WIDEST];
+    lanes.store(&mut buffer[..S::F64_LANES]);
+    for (row, value) in rows.iter().zip(buffer) {
+        to[*row as usize] = value;
+    }
+}

@@ -1,0 +1,237 @@
+//! The distance-modulus posterior against 40-digit arithmetic, published values, and itself (order, reflection, bits).
+
+use tenparsec::posterior::{BAND_OUTPUTS, MODULUS_OUTPUTS, Photometry, Prior, Workspace, summarise};
+
+/// Rows of a reference file as fields, without comments and the heading.
+fn table(text: &'static str) -> impl Iterator<Item = Vec<&'static str>> {
+    text.lines().filter(|line| !line.starts_with('#')).skip(1).map(|line| line.split(',').collect())
+}
+
+fn number(field: &str) -> f64 {
+    field.parse().unwrap_or(f64::NAN)
+}
+
+/// All outputs for a set of rows, photometry of apparent magnitude 0 in one band a column of errors.
+fn run(prior: &Prior, parallax: &[f64], error: &[f64], bands: &[Vec<f64>], scratch: &mut Workspace) -> Vec<Vec<f64>> {
+    let zero = vec![0.0; parallax.len()];
+    let photometry: Vec<Photometry> = bands.iter().map(|error| Photometry { apparent: &zero, error }).collect();
+    let mut columns = vec![vec![0.0; parallax.len()]; MODULUS_OUTPUTS + BAND_OUTPUTS * bands.len()];
+    let mut out: Vec<&mut [f64]> = columns.iter_mut().map(|column| &mut column[..]).collect();
+    summarise(prior, parallax, error, &photometry, &mut out, scratch);
+    columns
+}
+
+fn prior_of(fields: &[&str]) -> Prior {
+    match fields[0] {
+        "exponentially-decreasing-density" => Prior::ExponentiallyDecreasingDensity { length_kpc: number(fields[1]) },
+        "uniform-density" => Prior::UniformDensity { limit_kpc: number(fields[1]) },
+        other => panic!("no such prior: {other}"),
+    }
+}
+
+/// Compares every output with a file of `posterior_values.py`; the worst error must stay below 1e-6.
+fn against(text: &'static str, at_least: usize) {
+    const NAMES: [&str; 10] = ["p16", "p50", "p84", "mode", "mean", "sd", "share", "m16", "m50", "m84"];
+    let mut scratch = Workspace::new();
+    let mut values = 0;
+    for fields in table(text) {
+        let got = run(
+            &prior_of(&fields),
+            &[number(fields[4])],
+            &[number(fields[5])],
+            &[vec![number(fields[8])]],
+            &mut scratch,
+        );
+        for (k, name) in NAMES.iter().enumerate() {
+            let error = (got[k][0] - number(fields[9 + k])).abs();
+            assert!(error < 1e-6, "{name} is off by {error:e}: {fields:?}");
+            values += 1;
+        }
+    }
+    assert!(values >= at_least, "only {values} values");
+}
+
+/// Source: posterior_values.py (mpmath, 40 digits).
+#[test]
+fn exponentially_decreasing_density_agrees_with_forty_digits() {
+    against(include_str!("../reference/posterior_exponential.csv"), 4500);
+}
+
+/// Source: posterior_values.py (mpmath, 40 digits).
+#[test]
+fn uniform_density_agrees_with_forty_digits() {
+    against(include_str!("../reference/posterior_uniform.csv"), 2300);
+}
+
+/// Source: edsd_checks.csv; distances there have 8 digits and quantile levels 6.
+#[test]
+fn quantiles_and_modes_agree_with_independent_values() {
+    for fields in table(include_str!("../reference/edsd_checks.csv")) {
+        let v: Vec<f64> = fields.iter().map(|f| number(f)).collect();
+        let prior = Prior::ExponentiallyDecreasingDensity { length_kpc: v[2] };
+        let got = run(&prior, &[v[0]], &[v[1]], &[], &mut Workspace::new());
+        for (output, kpc, tolerance) in [(3, v[3], 2e-7), (0, v[4], 4e-6), (1, v[5], 2e-6), (2, v[6], 4e-6)] {
+            let modulus = 5.0 * kpc.log10() + 10.0;
+            assert!((got[output][0] - modulus).abs() < tolerance, "{fields:?} {output}: {} {modulus}", got[output][0]);
+        }
+    }
+}
+
+/// Source: edsd_mode_roots.csv, the root of highest density (10 digits).
+#[test]
+fn mode_is_the_highest_root_of_the_cubic() {
+    for fields in table(include_str!("../reference/edsd_mode_roots.csv")) {
+        let prior = Prior::ExponentiallyDecreasingDensity { length_kpc: number(fields[2]) };
+        let got = run(&prior, &[number(fields[0])], &[number(fields[1])], &[], &mut Workspace::new());
+        let modulus = 5.0 * number(fields[6]).log10() + 10.0;
+        assert!((got[3][0] - modulus).abs() < 1e-8, "{fields:?}: {} {modulus}", got[3][0]);
+    }
+}
+
+/// Lutz & Kelker 1973, PASP 85, 573, Table 1: their lower end of the true parallax is a limit of distance here.
+#[test]
+fn lutz_and_kelker_table_is_reproduced() {
+    let mut rows = 0;
+    for fields in table(include_str!("../reference/lutz_kelker.csv")) {
+        let ratio = number(fields[0]);
+        if ratio == 0.0 {
+            continue;
+        }
+        let nearest = (1.0 - (1.0 - 16.0 * ratio * ratio).sqrt()) / 2.0;
+        let prior = Prior::UniformDensity { limit_kpc: 1.0 / nearest };
+        let got = run(&prior, &[1.0], &[ratio], &[], &mut Workspace::new());
+        let correction = 10.0 - got[4][0];
+        assert!((correction - number(fields[3])).abs() < 6e-5, "{fields:?}: {correction}");
+        assert!((correction - number(fields[1])).abs() < 0.0051, "{fields:?}: {correction}");
+        rows += 1;
+    }
+    assert_eq!(rows, 7);
+}
+
+/// SplitMix64, uniform in [0, 1).
+struct Uniform(u64);
+
+impl Uniform {
+    fn next(&mut self) -> f64 {
+        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
+        let mut z = self.0;
+        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
+        ((z ^ (z >> 31)) >> 11) as f64 / (1u64 << 53) as f64
+    }
+
+    fn log_between(&mut self, a: f64, b: f64) -> f64 {
+        a * (b / a).powf(self.next())
+    }
+}
+
+/// Rows over the whole domain, hard corners included.
+fn rows(count: usize, seed: u64) -> (Vec<f64>, Vec<f64>, Vec<f64>) {
+    let mut random = Uniform(seed);
+    let (mut parallax, mut error, mut photometric) = (Vec::new(), Vec::new(), Vec::new());
+    for _ in 0..count {
+        let sigma = random.log_between(1e-3, 10.0);
+        let ratio = match (random.next() * 3.0) as u32 {
+            0 => -5.0 + 15.0 * random.next(),
+            1 => random.log_between(0.1, 300.0),
+            _ => -20.0 + 40.0 * random.next(),
+        };
+        parallax.push(ratio * sigma);
+        error.push(sigma);
+        photometric.push(if random.next() < 0.1 { 0.0 } else { random.log_between(1e-3, 0.3) });
+    }
+    (parallax, error, photometric)
+}
+
+const PRIORS: [Prior; 2] =
+    [Prior::ExponentiallyDecreasingDensity { length_kpc: 1.35 }, Prior::UniformDensity { limit_kpc: 5.0 }];
+
+#[test]
+fn simd_and_scalar_paths_give_the_same_bits() {
+    for prior in &PRIORS {
+        let (parallax, error, photometric) = rows(500_000, 11);
+        let bands = [photometric];
+        let wide = run(prior, &parallax, &error, &bands, &mut Workspace::new());
+        let narrow = run(prior, &parallax, &error, &bands, &mut Workspace::scalar());
+        for (a, b) in wide.iter().zip(&narrow) {
+            assert!(a.iter().zip(b).all(|(a, b)| a.to_bits() == b.to_bits()));
+        }
+    }
+}
+
+#[test]
+fn a_row_does_not_depend_on_its_neighbours() {
+    for prior in &PRIORS {
+        let (parallax, error, photometric) = rows(3_000, 12);
+        let bands = [photometric.clone()];
+        let whole = run(prior, &parallax, &error, &bands, &mut Workspace::new());
+        for (start, end) in [(0, 1), (1, 700), (700, 703), (703, 2999), (2999, 3000)] {
+            let bands = [photometric[start..end].to_vec()];
+            let piece = run(prior, &parallax[start..end], &error[start..end], &bands, &mut Workspace::new());
+            for (a, b) in whole.iter().zip(&piece) {
+                assert!(a[start..end].iter().zip(b).all(|(a, b)| a.to_bits() == b.to_bits()));
+            }
+        }
+    }
+}
+
+#[test]
+fn summaries_are_ordered_finite_and_within_bounds() {
+    for prior in &PRIORS {
+        let (parallax, error, photometric) = rows(100_000, 13);
+        let got = run(prior, &parallax, &error, &[photometric], &mut Workspace::new());
+        for i in 0..parallax.len() {
+            let row: Vec<f64> = got.iter().map(|column| column[i]).collect();
+            assert!(row.iter().all(|v| v.is_finite()), "{} {}: {row:?}", parallax[i], error[i]);
+            assert!(row[0] < row[1] && row[1] < row[2], "{row:?}");
+            assert!(row[5] > 0.0 && row[6] > 0.0 && row[6] <= 1.0, "{row:?}");
+            assert!(row[7] < row[8] && row[8] < row[9], "{row:?}");
+            assert!(row[4] > row[0] - 5.0 * row[5] && row[4] < row[2] + 5.0 * row[5], "{row:?}");
+        }
+    }
+}
+
+#[test]
+fn larger_parallax_means_smaller_modulus() {
+    for prior in &PRIORS {
+        for sigma in [0.003, 0.1, 2.0] {
+            let parallax: Vec<f64> = (0..4000).map(|i| sigma * (-20.0 + 0.02 * f64::from(i))).collect();
+            let error = vec![sigma; parallax.len()];
+            let got = run(prior, &parallax, &error, &[], &mut Workspace::new());
+            for column in &got[..3] {
+                for (i, pair) in column.windows(2).enumerate() {
+                    assert!(pair[1] < pair[0] + 1e-9, "{sigma} {}: {pair:?}", parallax[i]);
+                }
+            }
+        }
+    }
+}
+
+#[test]
+fn without_photometric_error_magnitudes_are_reflected_moduli() {
+    for prior in &PRIORS {
+        let (parallax, error, _) = rows(10_000, 14);
+        let got = run(prior, &parallax, &error, &[vec![0.0; parallax.len()]], &mut Workspace::new());
+        for i in 0..parallax.len() {
+            for level in 0..3 {
+                assert!((got[MODULUS_OUTPUTS + level][i] + got[2 - level][i]).abs() < 1e-12);
+            }
+        }
+    }
+}
+
+#[test]
+fn missing_input_gives_missing_output_and_nothing_else() {
+    let nan = f64::NAN;
+    let parallax = [1.0, nan, f64::INFINITY, 1.0, 1.0, 1.0, 1.0, 1.0, 1e-300, -1e30, 1e30];
+    let error = [0.1, 0.1, 0.1, nan, 0.0, -0.1, f64::INFINITY, 0.1, 1e-300, 1e-5, 1e-5];
+    let photometric = vec![nan, 0.1, 0.1, 0.1, 0.1, 0.1, 0.1, -0.1, 0.1, 0.1, 0.1];
+    for prior in &PRIORS {
+        let got = run(prior, &parallax, &error, &[photometric.clone()], &mut Workspace::new());
+        for (i, known) in [true, false, false, false, false, false, false, true, true, true, true].iter().enumerate() {
+            assert!(got[..MODULUS_OUTPUTS].iter().all(|c| c[i].is_finite() == *known), "{i} {:?}", got[0][i]);
+            let band = *known && photometric[i] >= 0.0;
+            assert!(got[MODULUS_OUTPUTS..].iter().all(|c| c[i].is_finite() == band), "{i}");
+        }
+    }
+}
