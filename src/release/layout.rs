@@ -317,7 +317,24 @@ fn without_float_bounds(
     if float { builder.set_column_statistics_enabled(path, EnabledStatistics::None) } else { builder }
 }
 
-/// Encodings of computed columns.
+/// Encodings of computed columns, as measured by `tests/suite/storage/encodings.rs` (10 posterior-like f32 columns of 1 M
+/// rows with 2.5 % nulls, no statistics, pages of 65,536 rows; speed relative to the choice on a busy 2-core machine, so
+/// good to some 10 %; bytes per value are exact):
+///
+/// | f32 | PLAIN | BYTE_STREAM_SPLIT |
+/// | --- | --- | --- |
+/// | uncompressed | 1.3 x, 3.98 B | 1.1 x, 3.98 B |
+/// | snappy | 1.7 x, 3.29 B | 0.9 x, 2.83 B |
+/// | lz4_raw | 1.5 x, 3.23 B | 0.9 x, 2.90 B |
+/// | zstd 1 | **1 x, 2.82 B** | 0.7 x, 2.64 B |
+/// | zstd 3 | 0.7 x, 2.81 B | 0.6 x, 2.61 B |
+///
+/// PLAIN with zstd 1: as small as snappy with byte-stream split and faster. Splitting would save 6 % more for 40 % more
+/// time, snappy would save 40 % of the time for files a sixth larger; encoding is the largest cost beside the posterior
+/// and the files stay for years. Pages of 65,536 rows are 1 to 3 % smaller than those of 20,000 and as fast.
+///
+/// Verdicts have few values: dictionary with zstd 1 takes 0.14 B (snappy 0.25 B; without dictionary 0.34 B with zstd 1,
+/// 0.92 B with lz4). Booleans are packed bits: 0.115 B with zstd 1, 0.131 B as RLE.
 fn computed_properties(builder: WriterPropertiesBuilder, column: &ColumnDescriptor) -> Result<WriterPropertiesBuilder> {
     let path = column.path().clone();
     let few_values = column.physical_type() == Physical::INT32;
@@ -348,7 +365,7 @@ fn refuse_lossy(input: &SchemaDescriptor, own: &Fields) -> Result<()> {
             errors.push(cannot(&name, "intervals would lose their months"));
         } else if old.physical_type() == Physical::INT96 {
             errors.push(cannot(&name, "INT96 timestamps have no writer"));
-        } else if !same && !(decimal && integer) {
+        } else if !(same || decimal && integer) {
             errors.push(cannot(
                 &name,
                 &format!("{} values would be stored as {}", old.physical_type(), new.physical_type()),
