@@ -11,4 +11,5 @@
 pub mod error;
 pub mod frame;
 pub mod mock;
+pub mod plan;
 pub mod sky;

@@ -9,8 +9,8 @@ use std::ops::Range;
 use std::path::{Path, PathBuf};
 
 use arrow::datatypes::SchemaRef;
-use parquet::arrow::arrow_writer::{ArrowColumnChunk, ArrowRowGroupWriterFactory, ArrowWriterOptions, compute_leaves};
 use parquet::arrow::ArrowWriter;
+use parquet::arrow::arrow_writer::{ArrowColumnChunk, ArrowRowGroupWriterFactory, ArrowWriterOptions, compute_leaves};
 use parquet::basic::{Compression, ZstdLevel};
 use parquet::errors::Result as ParquetResult;
 use parquet::file::properties::{EnabledStatistics, WriterProperties};
@@ -79,7 +79,11 @@ pub fn write_file(job: &Job, target: &Path, rows: Range<u64>, progress: &mut dyn
             let count = finished.iter().map(|group| group.rows).sum();
             let (written, made) = rayon::join(
                 || append(&mut file, std::mem::take(&mut finished)),
-                || wave.par_iter().map(|(index, rows)| encode(job, &factory, *index, rows.clone())).collect::<ParquetResult<Vec<Encoded>>>(),
+                || {
+                    wave.par_iter()
+                        .map(|(index, rows)| encode(job, &factory, *index, rows.clone()))
+                        .collect::<ParquetResult<Vec<Encoded>>>()
+                },
             );
             written.map_err(told)?;
             finished = made.map_err(told)?;
