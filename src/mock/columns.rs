@@ -98,9 +98,8 @@ pub fn schema(truth: bool) -> Schema {
     Schema::new(fields)
 }
 
-/// Lays rows out as arrays in the order of [`schema`].
-pub fn arrays(rows: impl ExactSizeIterator<Item = Row>, truth: bool) -> Vec<ArrayRef> {
-    let n = rows.len();
+/// Lays `n` rows out as arrays in the order of [`schema`].
+pub fn arrays(rows: impl Iterator<Item = Row>, n: usize, truth: bool) -> Vec<ArrayRef> {
     let names: Vec<String> = (0..FIELDS).map(field_name).collect();
     let float = || Float32Builder::with_capacity(n);
     let mut source = Int64Builder::with_capacity(n);

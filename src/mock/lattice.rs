@@ -77,6 +77,12 @@ pub struct Lattice {
     alias: Vec<(u32, u32)>,
 }
 
+/// A cell to try, with its envelope.
+pub struct Candidate {
+    cell: usize,
+    envelope: f64,
+}
+
 /// A place with what follows from it alone.
 struct Place {
     sin_l: f64,
@@ -108,10 +114,19 @@ impl Lattice {
         lattice
     }
 
-    /// Draws one star that the survey sees.
-    pub fn draw(&self, draws: &mut Draws) -> Placed {
+    /// Draws the first cell to try, and reads its envelope. Apart from [`Lattice::draw`], so that the slow memory reads of
+    /// several stars can overlap.
+    pub fn first(&self, draws: &mut Draws) -> Candidate {
+        let cell = self.cell(draws);
+        Candidate { cell, envelope: f64::from(self.envelope[cell]) }
+    }
+
+    /// Draws one star that the survey sees, the first try being in the cell `candidate`.
+    pub fn draw(&self, candidate: Candidate, draws: &mut Draws) -> Placed {
+        let mut next = Some(candidate);
         loop {
-            let (cell, threshold) = (self.cell(draws), draws.uniform());
+            let Candidate { cell, envelope } = next.take().unwrap_or_else(|| self.first(draws));
+            let threshold = draws.uniform();
             let (shell, column) = (cell % DISTANCES, cell / DISTANCES);
             let (i, j) = (column / LATITUDES, column % LATITUDES);
             let (u, v, w) = (draws.uniform(), draws.uniform(), draws.uniform());
@@ -121,7 +136,7 @@ impl Lattice {
             let Place { sin_l, cos_l, sin_b, distance, modulus, a_v } = place;
             let weights = seen.weights;
             let total: f64 = weights.iter().sum();
-            if threshold * f64::from(self.envelope[cell]) >= total {
+            if threshold * envelope >= total {
                 continue;
             }
             let mut left = draws.uniform() * total;
@@ -140,7 +155,7 @@ impl Lattice {
     fn cell(&self, draws: &mut Draws) -> usize {
         // High bits choose the entry, low bits whether to keep it.
         let bits = draws.bits();
-        let entry = ((bits >> 32) * self.alias.len() as u64 >> 32) as usize;
+        let entry = (((bits >> 32) * self.alias.len() as u64) >> 32) as usize;
         let (keep, other) = self.alias[entry];
         if (bits as u32) < keep { entry } else { other as usize }
     }

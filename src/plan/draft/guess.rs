@@ -227,9 +227,9 @@ fn pick<'a>(
 }
 
 fn is_a_v(c: &Read) -> bool {
-    let by_name = || match c.words.iter().map(String::as_str).collect::<Vec<_>>()[..] {
-        ["av"] | ["a", "v"] | ["extinction", "v"] | ["v", "extinction"] | ["extinction"] => true,
-        _ => false,
+    let by_name = || {
+        let words: Vec<&str> = c.words.iter().map(String::as_str).collect();
+        matches!(words[..], ["av"] | ["a", "v"] | ["extinction", "v"] | ["v", "extinction"] | ["extinction"])
     };
     c.column.numeric
         && match c.main() {
