@@ -79,9 +79,12 @@ pub struct Lattice {
 
 /// A cell to try, with its envelope.
 pub struct Candidate {
-    cell: usize,
-    envelope: f64,
+    cell: u32,
+    envelope: f32,
 }
+
+/// Nine stars of ten are found in the first three cells.
+pub type Candidates = [Candidate; 3];
 
 /// A place with what follows from it alone.
 struct Place {
@@ -114,18 +117,23 @@ impl Lattice {
         lattice
     }
 
-    /// Draws the first cell to try, and reads its envelope. Apart from [`Lattice::draw`], so that the slow memory reads of
+    /// Draws the first cells to try, and reads their envelopes. Apart from [`Lattice::draw`], so that the slow memory reads of
     /// several stars can overlap.
-    pub fn first(&self, draws: &mut Draws) -> Candidate {
-        let cell = self.cell(draws);
-        Candidate { cell, envelope: f64::from(self.envelope[cell]) }
+    pub fn candidates(&self, draws: &mut Draws) -> Candidates {
+        std::array::from_fn(|_| self.candidate(draws))
     }
 
-    /// Draws one star that the survey sees, the first try being in the cell `candidate`.
-    pub fn draw(&self, candidate: Candidate, draws: &mut Draws) -> Placed {
-        let mut next = Some(candidate);
+    fn candidate(&self, draws: &mut Draws) -> Candidate {
+        let cell = self.cell(draws);
+        Candidate { cell: cell as u32, envelope: self.envelope[cell] }
+    }
+
+    /// Draws one star that the survey sees, the first tries being in the cells `candidates`.
+    pub fn draw(&self, candidates: Candidates, draws: &mut Draws) -> Placed {
+        let mut candidates = candidates.into_iter();
         loop {
-            let Candidate { cell, envelope } = next.take().unwrap_or_else(|| self.first(draws));
+            let Candidate { cell, envelope } = candidates.next().unwrap_or_else(|| self.candidate(draws));
+            let (cell, envelope) = (cell as usize, f64::from(envelope));
             let threshold = draws.uniform();
             let (shell, column) = (cell % DISTANCES, cell / DISTANCES);
             let (i, j) = (column / LATITUDES, column % LATITUDES);
@@ -157,7 +165,9 @@ impl Lattice {
         let bits = draws.bits();
         let entry = (((bits >> 32) * self.alias.len() as u64) >> 32) as usize;
         let (keep, other) = self.alias[entry];
-        if (bits as u32) < keep { entry } else { other as usize }
+        // Without a branch, which would be guessed wrongly half the time and hold up the reads behind it.
+        let kept = usize::from((bits as u32) < keep);
+        kept * entry + (1 - kept) * other as usize
     }
 
     /// The place at a position in units of cells.

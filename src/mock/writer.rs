@@ -103,7 +103,7 @@ struct Encoded {
 }
 
 fn encode(job: &Job, factory: &ArrowRowGroupWriterFactory, index: usize, rows: Range<u64>) -> ParquetResult<Encoded> {
-    // Stars are opened in blocks before they are drawn: see `Lattice::first`.
+    // Stars are opened in blocks before they are drawn: see `Lattice::candidates`.
     const BLOCK: u64 = 32;
     let count = rows.end - rows.start;
     let blocks = (rows.start..rows.end).step_by(BLOCK as usize).map(|from| from..(from + BLOCK).min(rows.end));
