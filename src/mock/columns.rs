@@ -54,7 +54,14 @@ pub fn schema(truth: bool) -> Schema {
     }
     fields.extend([
         field("a_v", Float32, true, "mag", "phys.absorption;em.opt.V", "Estimate of the foreground extinction in V"),
-        field("fit_quality", Float32, true, "", "stat.fit.goodness", "Goodness of the astrometric fit, near 1 when good"),
+        field(
+            "fit_quality",
+            Float32,
+            true,
+            "",
+            "stat.fit.goodness",
+            "Goodness of the astrometric fit, near 1 when good",
+        ),
         field("visits", UInt16, false, "", "meta.number;obs", "Visits that the astrometric fit used"),
     ]);
     if truth {
@@ -91,9 +98,8 @@ pub fn schema(truth: bool) -> Schema {
     Schema::new(fields)
 }
 
-/// Lays rows out as arrays in the order of [`schema`].
-pub fn arrays(rows: impl ExactSizeIterator<Item = Row>, truth: bool) -> Vec<ArrayRef> {
-    let n = rows.len();
+/// Lays `n` rows out as arrays in the order of [`schema`].
+pub fn arrays(rows: impl Iterator<Item = Row>, n: usize, truth: bool) -> Vec<ArrayRef> {
     let names: Vec<String> = (0..FIELDS).map(field_name).collect();
     let float = || Float32Builder::with_capacity(n);
     let mut source = Int64Builder::with_capacity(n);
@@ -140,11 +146,7 @@ pub fn arrays(rows: impl ExactSizeIterator<Item = Row>, truth: bool) -> Vec<Arra
         Arc::new(parallax_error.finish()),
     ];
     arrays.extend(photometry.iter_mut().map(|builder| Arc::new(builder.finish()) as ArrayRef));
-    arrays.extend([
-        Arc::new(a_v.finish()) as ArrayRef,
-        Arc::new(fit_quality.finish()),
-        Arc::new(visits.finish()),
-    ]);
+    arrays.extend([Arc::new(a_v.finish()) as ArrayRef, Arc::new(fit_quality.finish()), Arc::new(visits.finish())]);
     if truth {
         arrays.push(Arc::new(distance.finish()));
         arrays.extend(true_floats.iter_mut().map(|builder| Arc::new(builder.finish()) as ArrayRef));

@@ -77,6 +77,15 @@ pub struct Lattice {
     alias: Vec<(u32, u32)>,
 }
 
+/// A cell to try, with its envelope.
+pub struct Candidate {
+    cell: u32,
+    envelope: f32,
+}
+
+/// Nine stars of ten are found in the first three cells.
+pub type Candidates = [Candidate; 3];
+
 /// A place with what follows from it alone.
 struct Place {
     sin_l: f64,
@@ -108,10 +117,24 @@ impl Lattice {
         lattice
     }
 
-    /// Draws one star that the survey sees.
-    pub fn draw(&self, draws: &mut Draws) -> Placed {
+    /// Draws the first cells to try, and reads their envelopes. Apart from [`Lattice::draw`], so that the slow memory reads of
+    /// several stars can overlap.
+    pub fn candidates(&self, draws: &mut Draws) -> Candidates {
+        std::array::from_fn(|_| self.candidate(draws))
+    }
+
+    fn candidate(&self, draws: &mut Draws) -> Candidate {
+        let cell = self.cell(draws);
+        Candidate { cell: cell as u32, envelope: self.envelope[cell] }
+    }
+
+    /// Draws one star that the survey sees, the first tries being in the cells `candidates`.
+    pub fn draw(&self, candidates: Candidates, draws: &mut Draws) -> Placed {
+        let mut candidates = candidates.into_iter();
         loop {
-            let (cell, threshold) = (self.cell(draws), draws.uniform());
+            let Candidate { cell, envelope } = candidates.next().unwrap_or_else(|| self.candidate(draws));
+            let (cell, envelope) = (cell as usize, f64::from(envelope));
+            let threshold = draws.uniform();
             let (shell, column) = (cell % DISTANCES, cell / DISTANCES);
             let (i, j) = (column / LATITUDES, column % LATITUDES);
             let (u, v, w) = (draws.uniform(), draws.uniform(), draws.uniform());
@@ -121,7 +144,7 @@ impl Lattice {
             let Place { sin_l, cos_l, sin_b, distance, modulus, a_v } = place;
             let weights = seen.weights;
             let total: f64 = weights.iter().sum();
-            if threshold * f64::from(self.envelope[cell]) >= total {
+            if threshold * envelope >= total {
                 continue;
             }
             let mut left = draws.uniform() * total;
@@ -140,9 +163,11 @@ impl Lattice {
     fn cell(&self, draws: &mut Draws) -> usize {
         // High bits choose the entry, low bits whether to keep it.
         let bits = draws.bits();
-        let entry = ((bits >> 32) * self.alias.len() as u64 >> 32) as usize;
+        let entry = (((bits >> 32) * self.alias.len() as u64) >> 32) as usize;
         let (keep, other) = self.alias[entry];
-        if (bits as u32) < keep { entry } else { other as usize }
+        // Without a branch, which would be guessed wrongly half the time and hold up the reads behind it.
+        let kept = usize::from((bits as u32) < keep);
+        kept * entry + (1 - kept) * other as usize
     }
 
     /// The place at a position in units of cells.

@@ -98,9 +98,7 @@ fn targets(options: &Options) -> Result<(Vec<PathBuf>, PathBuf)> {
         return Err(Error::plan("The number of files must lie between 1 and 100,000.").at_key("--files"));
     }
     if !(1..=100_000_000).contains(&options.row_group_rows) {
-        return Err(
-            Error::plan("Rows in a row group must lie between 1 and 100 million.").at_key("--row-group-rows")
-        );
+        return Err(Error::plan("Rows in a row group must lie between 1 and 100 million.").at_key("--row-group-rows"));
     }
     if options.rows > 1 << 40 {
         return Err(Error::plan("A mock has at most 2^40 rows.").at_key("--rows"));

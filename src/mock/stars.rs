@@ -189,8 +189,7 @@ impl Stars {
                 if m < *from || m > *to { 0.0 } else { libm::exp10(curve.at(m)) }
             };
             let u = (m - CLUMP.0) / CLUMP.1;
-            let in_clump =
-                CLUMP.2 / (CLUMP.1 * (2.0 * std::f64::consts::PI).sqrt()) * libm::exp(-0.5 * u * u);
+            let in_clump = CLUMP.2 / (CLUMP.1 * (2.0 * std::f64::consts::PI).sqrt()) * libm::exp(-0.5 * u * u);
             let giants = number(Kind::Giant) + in_clump;
             clump.push(if giants > 0.0 { in_clump / giants } else { 0.0 });
             let old = 1.0 / (1.0 + libm::exp((TURN_OFF.0 - m) / TURN_OFF.1));

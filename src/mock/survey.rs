@@ -7,7 +7,7 @@
 //!
 //! Units: deg, mas, mag, pc.
 
-use super::lattice::{Lattice, NEARBY, Placed, WIDE};
+use super::lattice::{Candidates, Lattice, NEARBY, Placed, WIDE};
 use super::random::{Draws, identifier};
 use super::stars::Star;
 use crate::sky::{galactic_to_icrs, longitude_latitude, sin_ecliptic_latitude};
@@ -94,11 +94,26 @@ impl Sky {
     }
 }
 
-/// Observes the star of row `row`.
-pub fn observe(sky: &Sky, seed: u64, row: u64) -> Row {
+/// A star about to be drawn.
+pub struct Start<'a> {
+    row: u64,
+    draws: Draws,
+    programme: &'a Lattice,
+    candidates: Candidates,
+}
+
+/// Opens the stream of row `row`.
+pub fn start(sky: &Sky, seed: u64, row: u64) -> Start<'_> {
     let mut draws = Draws::of_row(seed, row);
     let programme = if draws.chance(NEARBY_SHARE) { &sky.nearby } else { &sky.wide };
-    let Placed { direction, distance, modulus, a_v, star } = programme.draw(&mut draws);
+    let candidates = programme.candidates(&mut draws);
+    Start { row, draws, programme, candidates }
+}
+
+/// Draws the star and observes it.
+pub fn observe(start: Start, seed: u64) -> Row {
+    let Start { row, mut draws, programme, candidates } = start;
+    let Placed { direction, distance, modulus, a_v, star } = programme.draw(candidates, &mut draws);
     let icrs = galactic_to_icrs(direction);
     let (ra, dec) = longitude_latitude(icrs);
     let sin_beta = sin_ecliptic_latitude(icrs);

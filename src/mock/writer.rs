@@ -9,8 +9,8 @@ use std::ops::Range;
 use std::path::{Path, PathBuf};
 
 use arrow::datatypes::SchemaRef;
-use parquet::arrow::arrow_writer::{ArrowColumnChunk, ArrowRowGroupWriterFactory, ArrowWriterOptions, compute_leaves};
 use parquet::arrow::ArrowWriter;
+use parquet::arrow::arrow_writer::{ArrowColumnChunk, ArrowRowGroupWriterFactory, ArrowWriterOptions, compute_leaves};
 use parquet::basic::{Compression, ZstdLevel};
 use parquet::errors::Result as ParquetResult;
 use parquet::file::properties::{EnabledStatistics, WriterProperties};
@@ -19,7 +19,7 @@ use parquet::schema::types::ColumnPath;
 use rayon::prelude::*;
 
 use super::columns::arrays;
-use super::survey::{Sky, observe};
+use super::survey::{Sky, Start, observe, start};
 use crate::error::{Error, Result};
 
 /// What all files of one mock share.
@@ -79,7 +79,11 @@ pub fn write_file(job: &Job, target: &Path, rows: Range<u64>, progress: &mut dyn
             let count = finished.iter().map(|group| group.rows).sum();
             let (written, made) = rayon::join(
                 || append(&mut file, std::mem::take(&mut finished)),
-                || wave.par_iter().map(|(index, rows)| encode(job, &factory, *index, rows.clone())).collect::<ParquetResult<Vec<Encoded>>>(),
+                || {
+                    wave.par_iter()
+                        .map(|(index, rows)| encode(job, &factory, *index, rows.clone()))
+                        .collect::<ParquetResult<Vec<Encoded>>>()
+                },
             );
             written.map_err(told)?;
             finished = made.map_err(told)?;
@@ -99,9 +103,15 @@ struct Encoded {
 }
 
 fn encode(job: &Job, factory: &ArrowRowGroupWriterFactory, index: usize, rows: Range<u64>) -> ParquetResult<Encoded> {
+    // Stars are opened in blocks before they are drawn: see `Lattice::candidates`.
+    const BLOCK: u64 = 32;
     let count = rows.end - rows.start;
-    let made = (0..count as usize).map(|i| observe(job.sky, job.seed, rows.start + i as u64));
-    let arrays = arrays(made, job.truth);
+    let blocks = (rows.start..rows.end).step_by(BLOCK as usize).map(|from| from..(from + BLOCK).min(rows.end));
+    let stars = blocks.flat_map(|block| {
+        let starts: Vec<Start> = block.map(|row| start(job.sky, job.seed, row)).collect();
+        starts.into_iter().map(|start| observe(start, job.seed))
+    });
+    let arrays = arrays(stars, count as usize, job.truth);
     let writers = factory.create_column_writers(index)?;
     let mut chunks = Vec::with_capacity(arrays.len());
     for ((mut writer, array), field) in writers.into_iter().zip(&arrays).zip(job.schema.fields()) {

@@ -1,5 +1,6 @@
 //! All integration tests in one binary, so that polars is linked once.
 
+mod draft;
 mod house;
 mod magnitudes;
 mod mock;

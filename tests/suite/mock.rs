@@ -241,3 +241,25 @@ fn ecliptic_latitude_has_the_iau_obliquity() {
     let beta = sky::ecliptic_latitude(123.4, -56.7);
     assert!((sky::sin_ecliptic_latitude(v) - (beta * sky::RADIANS).sin()).abs() < 1e-15);
 }
+
+/// The demo is what the command in its README makes, byte for byte.
+#[test]
+fn demo_data_are_current() {
+    let demo = Path::new(env!("CARGO_MANIFEST_DIR")).join("demo-data");
+    let folder = tempfile::tempdir().expect("a folder");
+    let options = Options { files: 3, ..Options::new(folder.path(), 24_000) };
+    let summary = mock::write(&options, &|_| ()).expect("the mock is written");
+    for file in &summary.files {
+        let kept = demo.join("catalogue").join(file.file_name().expect("a name"));
+        assert!(
+            std::fs::read(file).expect("made") == std::fs::read(&kept).expect("kept"),
+            "{} differs",
+            kept.display()
+        );
+    }
+    let plan = std::fs::read_to_string(demo.join("plan.toml")).expect("the plan of the demo");
+    assert_eq!(plan, mock::plan_text("catalogue/*.parquet"));
+    let files = std::fs::read_dir(demo.join("catalogue")).expect("the folder is listed");
+    let bytes: u64 = files.map(|file| file.expect("an entry").metadata().expect("a size").len()).sum();
+    assert!(bytes < 3_000_000, "{bytes}");
+}
