@@ -6,6 +6,7 @@
 //! says so: a catalogue that counts a star twice by an overlapping glob is never what was meant.
 
 use std::collections::HashSet;
+use std::io::Read;
 use std::os::unix::ffi::OsStrExt;
 use std::path::{Component, Path, PathBuf};
 
@@ -126,13 +127,26 @@ impl Walk {
             }
             let path = item.path();
             if path.is_dir() {
-                self.folder(&path, found)?;
+                if !is_release(&path) {
+                    self.folder(&path, found)?;
+                }
             } else if path.extension().is_some_and(|extension| extension.eq_ignore_ascii_case("parquet")) {
                 found.push(path);
             }
         }
         Ok(())
     }
+}
+
+/// Does the folder hold a release, whole or unfinished? A release that stands below a catalogue's folder is no part of
+/// the catalogue; who wants to read one names it.
+fn is_release(folder: &Path) -> bool {
+    let begins = |name: &str, words: &str| {
+        let mut start = vec![0; 256];
+        let read = std::fs::File::open(folder.join(name)).and_then(|mut file| file.read(&mut start)).unwrap_or(0);
+        String::from_utf8_lossy(&start[..read]).contains(words)
+    };
+    begins("manifest.json", "tenparsec release") || begins("ledger.jsonl", "tenparsec ledger")
 }
 
 fn canonical(path: &Path) -> PathBuf {
