@@ -1,0 +1,5 @@
+//! Integration tests, one binary: a module a subject.
+
+mod exact_sum;
+mod tables;
+mod verdicts;
