@@ -89,7 +89,8 @@ fn mixed() -> RecordBatch {
     let bytes = UInt8Array::from(vec![Some(3), Some(255), None, Some(0), Some(7), Some(5)]);
     let ids = UInt64Array::from(vec![u64::MAX, 9_007_199_254_740_993, 0, 1, 2, 3]);
     let longs = Int64Array::from(vec![i64::MAX, i64::MIN, 0, -1, 9_007_199_254_740_993, 5]);
-    let texts = StringArray::from(vec![Some("alpha"), Some("Beta"), None, Some(""), Some("a_b%"), Some("\u{e9}t\u{e9}")]);
+    let texts =
+        StringArray::from(vec![Some("alpha"), Some("Beta"), None, Some(""), Some("a_b%"), Some("\u{e9}t\u{e9}")]);
     batch(vec![
         ("f", Arc::new(f32s) as ArrayRef),
         ("d", Arc::new(f64s)),
@@ -151,6 +152,8 @@ fn numbers_and_text_mean_what_they_say() {
         ("l - 1 IS NULL", [F, T, F, F, F, F]),
         ("-l IS NULL", [F, T, F, F, F, F]),
         ("ABS(l) IS NULL", [F, T, F, F, F, F]),
+        // The sign of a remainder is that of the dividend (ISO/IEC 9075-2, MOD).
+        ("i % 2 = -1", [F, T, N, F, F, F]),
         ("i / 2 = 1.5", [T, F, N, F, F, F]),
         ("i & 1 = 1", [T, T, N, F, T, F]),
         ("i BETWEEN 0 AND 3", [T, F, N, T, F, T]),
@@ -204,7 +207,7 @@ fn agrees_with_polars_sql() {
         "x + y * 2 < 3",
         "x - y >= k",
         "x / 4 > y",
-        "k % 3 = 1",
+        "(k + 8) % 3 = 1",
         "k * 2 + 1 > x",
         "x > 1 AND y < 2 OR k = 3",
         "NOT (x > 1 AND y < 2)",
@@ -238,7 +241,7 @@ fn agrees_with_polars_sql() {
         "t = 'field_3' OR t > 'field_8'",
         "LOG10(ABS(x) + 1) > 0.5",
         "DEGREES(x) > 90",
-        "MOD(k, 4) = 2",
+        "MOD(k + 8, 4) = 2",
     ] {
         let mut context = polars::sql::SQLContext::new();
         context.register("rows", frame.clone().lazy());
@@ -251,7 +254,8 @@ fn agrees_with_polars_sql() {
 
 #[test]
 fn dictionary_decimal_and_view_columns_can_be_named() {
-    let dictionary: DictionaryArray<arrow::datatypes::Int8Type> = vec![Some("a"), None, Some("b")].into_iter().collect();
+    let dictionary: DictionaryArray<arrow::datatypes::Int8Type> =
+        vec![Some("a"), None, Some("b")].into_iter().collect();
     let decimal = Decimal128Array::from(vec![Some(150), None, Some(-20)]).with_precision_and_scale(10, 2).unwrap();
     let rows = batch(vec![
         ("dict", Arc::new(dictionary) as ArrayRef),
@@ -327,10 +331,12 @@ fn wrong_conditions_are_explained() {
         assert_eq!(error.exit_code(), 2);
         assert!(!text.contains("Resolved plan") && !text.contains("sql parser error"), "{text}");
     }
-    let nested = format!("{}ruwe > 1{}", "(".repeat(5000), ")".repeat(5000));
+    let nested = format!("{}ruwe > 1{}", "(".repeat(300), ")".repeat(300));
     assert!(cuts(&[&nested], &schema).unwrap_err().to_string().contains("nested too deeply"));
     let chain = vec!["ruwe > 1"; 3000].join(" AND ");
-    assert!(cuts(&[&chain], &schema).unwrap_err().to_string().contains("too long a chain"));
+    assert!(cuts(&[&chain], &schema).unwrap_err().to_string().contains("too long"));
+    let sum = format!("ruwe > {}", vec!["1"; 200].join(" + "));
+    assert!(cuts(&[&sum], &schema).unwrap_err().to_string().contains("too long a chain"));
     let long = format!("Field = '{}'", "x".repeat(100_000));
     assert!(cuts(&[&long], &schema).unwrap_err().to_string().contains("at most"));
     let fine = vec!["ruwe > 1"; 300].join(" AND ");
@@ -340,8 +346,7 @@ fn wrong_conditions_are_explained() {
 #[test]
 fn all_faults_come_at_once() {
     let schema = Schema::new(vec![Field::new("ruwe", DataType::Float32, true)]);
-    let settings =
-        [cut("a", "ruwe < 1"), cut("a", "nothing < 1 AND nowhere > 2"), cut("", "ruwe <"), cut("d", "ruwe")];
+    let settings = [cut("a", "ruwe < 1"), cut("a", "nothing < 1 AND nowhere > 2"), cut("", "ruwe <"), cut("d", "ruwe")];
     let error = Cuts::new(&settings, &schema).unwrap_err();
     let keys: Vec<String> = error.each().map(|e| e.place.key.clone().unwrap()).collect();
     assert_eq!(keys, ["cuts[1].name", "cuts[1].keep", "cuts[1].keep", "cuts[2].name", "cuts[2].keep", "cuts[3].keep"]);
@@ -379,7 +384,7 @@ fn batches_of_any_size_give_the_same() {
 proptest! {
     #[test]
     fn counts_agree_with_counting(
-        rows in prop::collection::vec((any::<[Option<bool>; 3]>()), 0..60),
+        rows in prop::collection::vec(any::<[Option<bool>; 3]>(), 0..60),
         effects in any::<[bool; 3]>(),
         split in 0_usize..60,
     ) {
@@ -489,7 +494,7 @@ fn statistics_decide_what_they_can() {
         ("i NOT BETWEEN 3 AND 9", fail),
         ("i IN (1, 2)", fail),
         ("i NOT IN (1, 2)", keep),
-        ("i NOT IN (1, NULL)", missing.filter(|_| false)),
+        ("i NOT IN (1, NULL)", missing),
         ("i IS NULL", fail),
         ("i IS NOT NULL", keep),
         ("NOT i > 9", keep),
@@ -547,7 +552,7 @@ fn small_rows() -> impl Strategy<Value = Rows> {
     // Few distinct values and few rows, so that whole row groups often agree; sometimes all null or none.
     (1_usize..5, 0_u8..3).prop_flat_map(|(n, nulls)| {
         let weight = match nulls {
-            0 => 0.0,
+            0 => 0.001,
             1 => 0.3,
             _ => 0.9,
         };
@@ -555,7 +560,7 @@ fn small_rows() -> impl Strategy<Value = Rows> {
         where
             S::Value: Clone,
         {
-            prop::collection::vec(prop::option::weighted(1.0 - weight.min(0.999), s), n)
+            prop::collection::vec(prop::option::weighted(1.0 - weight, s), n)
         }
         (
             column(-3_i8..4, n, weight),
@@ -572,7 +577,9 @@ fn small_rows() -> impl Strategy<Value = Rows> {
 fn conditions() -> impl Strategy<Value = String> {
     let op = || prop::sample::select(vec!["=", "<>", "<", "<=", ">", ">="]);
     let whole = || (-4_i32..5).prop_map(|n| n.to_string());
-    let number = || prop_oneof![whole(), (-9_i32..10).prop_map(|n| format!("{:.1}", f64::from(n) / 2.0)), Just("NULL".to_string())];
+    let number = || {
+        prop_oneof![whole(), (-9_i32..10).prop_map(|n| format!("{:.1}", f64::from(n) / 2.0)), Just("NULL".to_string())]
+    };
     let text = || prop_oneof!["[ab\u{e9}]{0,4}".prop_map(|t| format!("'{t}'")), Just("NULL".to_string())];
     let leaf = prop_oneof![
         (prop::sample::select(vec!["i", "f", "c"]), op(), number()).prop_map(|(x, o, y)| format!("{x} {o} {y}")),
@@ -584,12 +591,23 @@ fn conditions() -> impl Strategy<Value = String> {
         (number(), number()).prop_map(|(x, y)| format!("c NOT BETWEEN {x} AND {y}")),
         (number(), number()).prop_map(|(x, y)| format!("i IN ({x}, {y})")),
         (text(), text()).prop_map(|(x, y)| format!("t NOT IN ({x}, {y})")),
-        prop::sample::select(vec!["b", "b = TRUE", "b <> TRUE", "i IS NULL", "f IS NULL", "t IS NOT NULL", "b IS UNKNOWN", "TRUE", "NULL"])
-            .prop_map(str::to_string),
+        prop::sample::select(vec![
+            "b",
+            "b = TRUE",
+            "b <> TRUE",
+            "i IS NULL",
+            "f IS NULL",
+            "t IS NOT NULL",
+            "b IS UNKNOWN",
+            "TRUE",
+            "NULL"
+        ])
+        .prop_map(str::to_string),
     ];
     leaf.prop_recursive(3, 12, 2, |inner| {
         prop_oneof![
-            (inner.clone(), prop::sample::select(vec!["AND", "OR"]), inner.clone()).prop_map(|(a, o, b)| format!("({a}) {o} ({b})")),
+            (inner.clone(), prop::sample::select(vec!["AND", "OR"]), inner.clone())
+                .prop_map(|(a, o, b)| format!("({a}) {o} ({b})")),
             inner.clone().prop_map(|a| format!("NOT ({a})")),
             (inner, prop::sample::select(vec!["TRUE", "NOT TRUE", "FALSE", "NOT FALSE", "NULL", "NOT NULL"]))
                 .prop_map(|(a, what)| format!("({a}) IS {what}")),

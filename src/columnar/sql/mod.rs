@@ -24,7 +24,7 @@ use polars::prelude::IntoLazy;
 use sqlparser::ast;
 use sqlparser::dialect::GenericDialect;
 use sqlparser::parser::{Parser, ParserError};
-use sqlparser::tokenizer::Token;
+use sqlparser::tokenizer::{Token, Tokenizer};
 
 use super::bridge::{self, Handed};
 use crate::error::{Error, Result, suggestion};
@@ -33,6 +33,9 @@ pub use translate::{arguments, is_aggregate, translate};
 
 /// Longest SQL text that is read, in bytes; bounds the depth of what follows.
 const LONGEST: usize = 64 * 1024;
+/// Most words and signs in it, beside literals and commas: chains nest one level an operator, and trees are walked and
+/// freed recursively, so this keeps the stack of any thread safe. Lists of values may be long.
+const MOST_TOKENS: usize = 2000;
 
 /// Type of an SQL expression.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -69,7 +72,7 @@ pub struct Scope {
 }
 
 /// Where aggregates may stand: gives each the column that will hold its result.
-pub trait Aggregates: std::fmt::Debug {
+pub trait Aggregates: std::fmt::Debug + Send + Sync {
     /// Name and type of the result column of `function`.
     ///
     /// # Errors
@@ -186,6 +189,17 @@ pub fn parse_statement(text: &str) -> Result<ast::Statement> {
 fn check_length(text: &str) -> Result<()> {
     if text.len() > LONGEST {
         return Err(Error::plan(format!("The SQL text has {} bytes; at most {LONGEST} are read.", text.len())));
+    }
+    let tokens = Tokenizer::new(&GenericDialect {}, text).tokenize().map_err(|e| syntax(e.into()))?;
+    let plain = |t: &&Token| {
+        !matches!(t, Token::Whitespace(_) | Token::Comma | Token::Number(..) | Token::SingleQuotedString(_))
+    };
+    let count = tokens.iter().filter(plain).count();
+    if count > MOST_TOKENS {
+        return Err(Error::plan(format!(
+            "The SQL text is too long: {count} words and signs, of which at most {MOST_TOKENS} are read. Lists of values in \
+             IN (...) do not count."
+        )));
     }
     Ok(())
 }
@@ -312,7 +326,8 @@ impl Expression {
         }
         let lazy = frame.clone().lazy().select_seq([self.expression.clone().alias("value")]);
         let result = lazy.without_optimizations().collect().map_err(|e| Error::failed(plain(&e)))?;
-        let value = result.columns().first().cloned().ok_or_else(|| Error::failed("An SQL expression gave nothing."))?;
+        let value =
+            result.columns().first().cloned().ok_or_else(|| Error::failed("An SQL expression gave nothing."))?;
         if value.dtype() != &self.kind.polars() {
             return Err(Error::failed(format!(
                 "An SQL expression gave {} instead of {}; this is a fault of the program.",

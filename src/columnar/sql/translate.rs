@@ -15,8 +15,8 @@ use crate::error::{Error, Result, suggestion};
 
 use Handed::{Boolean, Float32, Float64, Integer, Text, Unsigned};
 
-/// Deepest tree that is translated; a chain of that many ANDs counts too.
-const DEEPEST: usize = 400;
+/// Deepest tree that is translated. The parser allows 50 brackets; chains of AND and OR count as one level.
+const DEEPEST: usize = 100;
 
 /// A number as written.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -163,7 +163,7 @@ impl Translator<'_> {
         match sql {
             Sql::Identifier(name) => self.column(&name.value),
             Sql::CompoundIdentifier(parts) => match parts.as_slice() {
-                [table, name] if self.scope.tables.contains(&table.value) => self.column(&name.value),
+                [table, name] if self.scope.tables.contains(&table.value) => self.visit(&Sql::Identifier(name.clone())),
                 _ => Err(Error::plan(format!(
                     "`{sql}` is read as a column of another table; a name with a dot needs double quotes."
                 ))),
@@ -279,16 +279,14 @@ impl Translator<'_> {
 
     fn binary(&mut self, left: &Sql, op: &Op, right: &Sql, whole: &Sql) -> Result<Typed> {
         match op {
-            Op::And | Op::Or | Op::Xor => {
+            Op::And | Op::Or => {
+                let chain = chain(whole, op);
+                let terms = all(chain.into_iter().map(|term| self.truth(term)))?;
+                Ok(Typed::of(balanced(terms, *op == Op::And), Boolean))
+            }
+            Op::Xor => {
                 let (a, b) = both(self.truth(left), self.truth(right))?;
-                Ok(Typed::of(
-                    match op {
-                        Op::And => a.and(b),
-                        Op::Or => a.or(b),
-                        _ => a.neq(b),
-                    },
-                    Boolean,
-                ))
+                Ok(Typed::of(a.neq(b), Boolean))
             }
             Op::Eq | Op::NotEq | Op::Lt | Op::LtEq | Op::Gt | Op::GtEq => {
                 let (a, b) = both(self.visit(left), self.visit(right))?;
@@ -307,9 +305,9 @@ impl Translator<'_> {
                 let (a, b) = both(self.text(left), self.text(right))?;
                 Ok(Typed::of(f::join_texts(a, b), Text))
             }
-            Op::PGExp | Op::BitwiseXor => Err(Error::plan(format!(
-                "`{op}` in `{whole}` is not supported; write a power as `POWER(x, y)`."
-            ))),
+            Op::PGExp | Op::BitwiseXor => {
+                Err(Error::plan(format!("`{op}` in `{whole}` is not supported; write a power as `POWER(x, y)`.")))
+            }
             other => Err(Error::plan(format!("The operator `{other}` in `{whole}` is not supported."))),
         }
     }
@@ -479,7 +477,9 @@ impl Translator<'_> {
     fn function(&mut self, function: &ast::Function) -> Result<Typed> {
         let name = function.name.to_string().to_lowercase();
         if function.over.is_some() {
-            return Err(Error::plan(format!("`{function}` is a window function; an expression here sees one row at a time.")));
+            return Err(Error::plan(format!(
+                "`{function}` is a window function; an expression here sees one row at a time."
+            )));
         }
         if is_aggregate(&name) {
             if let Some(aggregates) = &self.scope.aggregates {
@@ -546,9 +546,9 @@ impl Translator<'_> {
                 let values = all(arguments.iter().map(|a| self.visit(a)))?;
                 let kind = common_named(&values, &function.to_string())?;
                 let values = values.into_iter().map(|v| v.into_expr(kind));
-                let expr = values.rev().reduce(|rest, value| {
-                    pl::when(value.clone().is_not_null()).then(value).otherwise(rest)
-                });
+                let expr = values
+                    .rev()
+                    .reduce(|rest, value| pl::when(value.clone().is_not_null()).then(value).otherwise(rest));
                 expr.map(|e| Typed::of(e, kind)).ok_or_else(|| wrong_count(&name, "an argument", 0))
             }
             "nullif" => {
@@ -588,18 +588,82 @@ impl Translator<'_> {
 
 /// Functions of one row.
 const FUNCTIONS: [&str; 35] = [
-    "abs", "acos", "asin", "atan", "atan2", "cbrt", "ceil", "char_length", "coalesce", "cos", "degrees", "ends_with",
-    "exp", "floor", "length", "ln", "log10", "log2", "lower", "mod", "nullif", "power", "radians", "round", "sign",
-    "sin", "sqrt", "starts_with", "substr", "substring", "tan", "trim", "trunc", "upper", "ceiling",
+    "abs",
+    "acos",
+    "asin",
+    "atan",
+    "atan2",
+    "cbrt",
+    "ceil",
+    "char_length",
+    "coalesce",
+    "cos",
+    "degrees",
+    "ends_with",
+    "exp",
+    "floor",
+    "length",
+    "ln",
+    "log10",
+    "log2",
+    "lower",
+    "mod",
+    "nullif",
+    "power",
+    "radians",
+    "round",
+    "sign",
+    "sin",
+    "sqrt",
+    "starts_with",
+    "substr",
+    "substring",
+    "tan",
+    "trim",
+    "trunc",
+    "upper",
+    "ceiling",
 ];
 
 /// True for the name of a function over many rows, whether a query can compute it or not.
 pub fn is_aggregate(name: &str) -> bool {
     const NAMES: [&str; 36] = [
-        "count", "sum", "avg", "mean", "min", "max", "stddev", "stddev_samp", "stddev_pop", "variance", "var_samp",
-        "var_pop", "stdev", "stdev_samp", "var", "median", "mode", "quantile", "quantile_cont", "quantile_disc",
-        "percentile_cont", "percentile_disc", "first", "last", "any_value", "array_agg", "string_agg", "group_concat",
-        "corr", "covar_pop", "covar_samp", "bit_and", "bit_or", "bit_xor", "every", "total",
+        "count",
+        "sum",
+        "avg",
+        "mean",
+        "min",
+        "max",
+        "stddev",
+        "stddev_samp",
+        "stddev_pop",
+        "variance",
+        "var_samp",
+        "var_pop",
+        "stdev",
+        "stdev_samp",
+        "var",
+        "median",
+        "mode",
+        "quantile",
+        "quantile_cont",
+        "quantile_disc",
+        "percentile_cont",
+        "percentile_disc",
+        "first",
+        "last",
+        "any_value",
+        "array_agg",
+        "string_agg",
+        "group_concat",
+        "corr",
+        "covar_pop",
+        "covar_samp",
+        "bit_and",
+        "bit_or",
+        "bit_xor",
+        "every",
+        "total",
     ];
     NAMES.contains(&name)
 }
@@ -618,7 +682,8 @@ fn unsigned(sql: &Sql) -> Error {
 /// The plain arguments of a function.
 pub fn arguments(function: &ast::Function) -> Result<Vec<&Sql>> {
     use ast::{FunctionArg, FunctionArgExpr, FunctionArguments};
-    let odd = || Error::plan(format!("`{function}` is written in a way that is not supported; use `name(argument, ...)`."));
+    let odd =
+        || Error::plan(format!("`{function}` is written in a way that is not supported; use `name(argument, ...)`."));
     let list = match &function.args {
         FunctionArguments::List(list) if list.duplicate_treatment.is_none() && list.clauses.is_empty() => &list.args,
         _ => return Err(odd()),
@@ -633,6 +698,37 @@ pub fn arguments(function: &ast::Function) -> Result<Vec<&Sql>> {
             _ => Err(odd()),
         })
         .collect()
+}
+
+/// The terms of a chain of one operator, which the parser nests to the left.
+fn chain<'a>(mut sql: &'a Sql, op: &Op) -> Vec<&'a Sql> {
+    let mut terms = Vec::new();
+    while let Sql::BinaryOp { left, op: this, right } = sql
+        && this == op
+    {
+        terms.push(right.as_ref());
+        sql = left;
+    }
+    terms.push(sql);
+    terms.reverse();
+    terms
+}
+
+/// AND or OR of all terms as a balanced tree: as deep as the logarithm of their number.
+fn balanced(mut terms: Vec<pl::Expr>, and: bool) -> pl::Expr {
+    while terms.len() > 1 {
+        let mut pairs = Vec::with_capacity(terms.len().div_ceil(2));
+        let mut rest = terms.into_iter();
+        while let Some(a) = rest.next() {
+            pairs.push(match rest.next() {
+                Some(b) if and => a.and(b),
+                Some(b) => a.or(b),
+                None => a,
+            });
+        }
+        terms = pairs;
+    }
+    terms.pop().unwrap_or_else(|| and.lit())
 }
 
 fn negate_if(negated: bool, expr: pl::Expr) -> Typed {
@@ -662,7 +758,9 @@ fn literal(value: &Value) -> Result<Typed> {
         Value::SingleQuotedString(text) => Ok(Typed::of(text.as_str().lit(), Text)),
         Value::Boolean(b) => Ok(Typed::of(b.lit(), Boolean)),
         Value::Null => Ok(Typed::null()),
-        other => Err(Error::plan(format!("The literal `{other}` is not supported; use numbers, 'text', TRUE, FALSE, NULL."))),
+        other => {
+            Err(Error::plan(format!("The literal `{other}` is not supported; use numbers, 'text', TRUE, FALSE, NULL.")))
+        }
     }
 }
 
