@@ -1,7 +1,7 @@
 //! SQL expressions over the columns of a batch: read, checked against a schema, turned into polars expressions, run.
 //!
-//! The grammar is that of the sqlparser crate; what an expression means is fixed here, in `translate` (operators and
-//! types) and `functions`, rather than left to an engine's defaults, because conditions decide which stars a release
+//! The grammar is that of the sqlparser crate; what an expression means is fixed here, in `translate` (operators),
+//! `typed` (types) and `calls` (functions), rather than left to an engine's defaults, because conditions decide which stars a release
 //! holds. In short:
 //! - three-valued logic; a result that is not finite (1/0, `LN(-1)`, overflow) is null, never a large number;
 //! - 64-bit integer arithmetic that overflows is null; `/` is real division;
@@ -11,8 +11,10 @@
 //!
 //! Each expression is evaluated on its own and without polars' thread pool where its environment asks for one thread.
 
+mod calls;
 mod functions;
 mod translate;
+mod typed;
 
 use std::collections::BTreeMap;
 use std::sync::Arc;
@@ -29,7 +31,9 @@ use sqlparser::tokenizer::{Token, Tokenizer};
 use super::bridge::{self, Handed};
 use crate::error::{Error, Result, suggestion};
 
-pub use translate::{arguments, is_aggregate, translate};
+pub use calls::{arguments, is_aggregate};
+pub use translate::translate;
+pub use typed::Typed;
 
 /// Longest SQL text that is read, in bytes; bounds the depth of what follows.
 const LONGEST: usize = 64 * 1024;
