@@ -56,10 +56,9 @@ impl Handed {
             DataType::UInt64 => Self::Unsigned,
             DataType::Float16 | DataType::Float32 => Self::Float32,
             DataType::Float64 => Self::Float64,
-            DataType::Decimal32(..)
-            | DataType::Decimal64(..)
-            | DataType::Decimal128(..)
-            | DataType::Decimal256(..) => Self::Float64,
+            DataType::Decimal32(..) | DataType::Decimal64(..) | DataType::Decimal128(..) | DataType::Decimal256(..) => {
+                Self::Float64
+            }
             DataType::Utf8 | DataType::LargeUtf8 | DataType::Utf8View => Self::Text,
             DataType::Dictionary(_, values) => Self::of(values)?,
             other => {
@@ -204,4 +203,152 @@ fn finite_or_null<T: arrow::array::ArrowPrimitiveType>(array: ArrayRef, finite: 
         return array;
     }
     Arc::new(values.iter().map(|x| x.filter(|x| finite(*x))).collect::<arrow::array::PrimitiveArray<T>>())
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use arrow::array::*;
+    use arrow::buffer::NullBuffer;
+    use arrow::datatypes::*;
+    use polars::prelude::AnyValue;
+
+    /// Hands over, and takes back as Arrow.
+    fn there_and_back(given: impl Array + 'static) -> ArrayRef {
+        let given: ArrayRef = Arc::new(given);
+        let kind = Handed::of(given.data_type()).unwrap();
+        let series = series("x", &given).unwrap();
+        assert_eq!(series.dtype(), &kind.polars());
+        assert_eq!(series.len(), given.len());
+        let back = array(&series).unwrap();
+        assert_eq!(back.data_type(), &kind.arrow());
+        back
+    }
+
+    #[test]
+    fn integers_become_signed_64_bit() {
+        let expected: ArrayRef = Arc::new(Int64Array::from(vec![Some(1), None, Some(7)]));
+        let one = [Some(1_u8), None, Some(7)];
+        assert_eq!(&there_and_back(UInt8Array::from(one.to_vec())), &expected);
+        assert_eq!(&there_and_back(Int8Array::from_iter(one.map(|x| x.map(|x| x as i8)))), &expected);
+        assert_eq!(&there_and_back(UInt16Array::from_iter(one.map(|x| x.map(u16::from)))), &expected);
+        assert_eq!(&there_and_back(Int16Array::from_iter(one.map(|x| x.map(i16::from)))), &expected);
+        assert_eq!(&there_and_back(UInt32Array::from_iter(one.map(|x| x.map(u32::from)))), &expected);
+        assert_eq!(&there_and_back(Int32Array::from_iter(one.map(|x| x.map(i32::from)))), &expected);
+        assert_eq!(&there_and_back(Int64Array::from_iter(one.map(|x| x.map(i64::from)))), &expected);
+        let wide: ArrayRef = Arc::new(UInt64Array::from(vec![Some(u64::MAX), None]));
+        assert_eq!(&there_and_back(UInt64Array::from(vec![Some(u64::MAX), None])), &wide);
+    }
+
+    #[test]
+    fn floats_that_are_not_finite_become_null() {
+        let expected: ArrayRef = Arc::new(Float64Array::from(vec![Some(1.5), None, None, None, None, Some(-0.0)]));
+        let given = [Some(1.5), None, Some(f64::NAN), Some(f64::INFINITY), Some(f64::NEG_INFINITY), Some(-0.0)];
+        assert_eq!(&there_and_back(Float64Array::from(given.to_vec())), &expected);
+        let narrow: ArrayRef = Arc::new(Float32Array::from(vec![Some(1.5), None, None, None, None, Some(-0.0)]));
+        assert_eq!(&there_and_back(Float32Array::from_iter(given.map(|x| x.map(|x| x as f32)))), &narrow);
+        let half = Float16Array::from_iter(given.map(|x| x.map(half_of)));
+        assert_eq!(&there_and_back(half), &narrow);
+        // A NaN under a null stays a null, and values around it survive.
+        let hidden = Float64Array::new(vec![f64::NAN, 2.0].into(), Some(NullBuffer::from(vec![false, true])));
+        let expected: ArrayRef = Arc::new(Float64Array::from(vec![None, Some(2.0)]));
+        assert_eq!(&there_and_back(hidden), &expected);
+    }
+
+    fn half_of(x: f64) -> <Float16Type as ArrowPrimitiveType>::Native {
+        <Float16Type as ArrowPrimitiveType>::Native::from_f64(x)
+    }
+
+    #[test]
+    fn decimals_become_doubles() {
+        let expected: ArrayRef = Arc::new(Float64Array::from(vec![Some(1.25), None, Some(-0.01)]));
+        let small = Decimal128Array::from(vec![Some(125), None, Some(-1)]).with_precision_and_scale(9, 2).unwrap();
+        assert_eq!(&there_and_back(small), &expected);
+        let big = Decimal256Array::from(vec![Some(i256::from_i128(125)), None, Some(i256::from_i128(-1))]);
+        assert_eq!(&there_and_back(big.with_precision_and_scale(50, 2).unwrap()), &expected);
+    }
+
+    #[test]
+    fn text_and_booleans_survive() {
+        let text = [Some("alpha"), None, Some(""), Some("a longer text than fits in a view \u{3b1}")];
+        let expected: ArrayRef = Arc::new(StringArray::from(text.to_vec()));
+        assert_eq!(&there_and_back(StringArray::from(text.to_vec())), &expected);
+        assert_eq!(&there_and_back(LargeStringArray::from(text.to_vec())), &expected);
+        assert_eq!(&there_and_back(StringViewArray::from(text.to_vec())), &expected);
+        let dictionary: DictionaryArray<Int8Type> = text.into_iter().collect();
+        assert_eq!(&there_and_back(dictionary), &expected);
+        let truth: ArrayRef = Arc::new(BooleanArray::from(vec![Some(true), None, Some(false)]));
+        assert_eq!(&there_and_back(BooleanArray::from(vec![Some(true), None, Some(false)])), &truth);
+    }
+
+    #[test]
+    fn a_dictionary_of_numbers_becomes_its_values() {
+        let keys = Int8Array::from(vec![Some(1), None, Some(0)]);
+        let dictionary = DictionaryArray::new(keys, Arc::new(Int32Array::from(vec![10, 20])));
+        let expected: ArrayRef = Arc::new(Int64Array::from(vec![Some(20), None, Some(10)]));
+        assert_eq!(&there_and_back(dictionary), &expected);
+    }
+
+    #[test]
+    fn slices_and_nothing_survive() {
+        let long: Vec<Option<i64>> = (0..100).map(|i| (i % 3 != 0).then_some(i)).collect();
+        let slice: ArrayRef = Arc::new(Int64Array::from(long[13..77].to_vec()));
+        assert_eq!(&there_and_back(Int64Array::from(long).slice(13, 64)), &slice);
+        let truth: Vec<Option<bool>> = (0..100).map(|i| (i % 7 != 0).then_some(i % 2 == 0)).collect();
+        let slice: ArrayRef = Arc::new(BooleanArray::from(truth[13..77].to_vec()));
+        assert_eq!(&there_and_back(BooleanArray::from(truth).slice(13, 64)), &slice);
+        let texts: Vec<String> = (0..50).map(|i| format!("text {i}")).collect();
+        let slice: ArrayRef = Arc::new(StringArray::from(texts[5..9].to_vec()));
+        assert_eq!(&there_and_back(StringArray::from(texts).slice(5, 4)), &slice);
+        assert_eq!(there_and_back(Int64Array::from(Vec::<i64>::new())).len(), 0);
+        assert_eq!(there_and_back(StringArray::from(Vec::<&str>::new())).len(), 0);
+        assert_eq!(there_and_back(BooleanArray::from(Vec::<bool>::new())).len(), 0);
+    }
+
+    #[test]
+    fn values_outlive_the_giver() {
+        let series = {
+            let given: ArrayRef = Arc::new(Int64Array::from((0..1000).collect::<Vec<i64>>()));
+            series("x", &given).unwrap()
+        };
+        assert_eq!(series.get(999).unwrap(), AnyValue::Int64(999));
+        let back = array(&series).unwrap();
+        drop(series);
+        assert_eq!(back.as_primitive::<Int64Type>().value(999), 999);
+    }
+
+    #[test]
+    fn what_sql_cannot_use_is_refused() {
+        for data_type in [
+            DataType::Date32,
+            DataType::Timestamp(TimeUnit::Microsecond, None),
+            DataType::Time64(TimeUnit::Nanosecond),
+            DataType::Duration(TimeUnit::Second),
+            DataType::Binary,
+            DataType::FixedSizeBinary(4),
+            DataType::Null,
+            DataType::new_list(DataType::Int8, true),
+            DataType::Struct(Fields::empty()),
+            DataType::Dictionary(Box::new(DataType::Int8), Box::new(DataType::Date32)),
+        ] {
+            let message = series("x", &new_empty_array(&data_type)).unwrap_err();
+            assert!(message.message.contains("cannot use"), "{data_type}: {message}");
+            assert_eq!(message.place.column.as_deref(), Some("x"));
+        }
+    }
+
+    #[test]
+    fn a_frame_has_the_columns_asked_for() {
+        let rows = RecordBatch::try_from_iter([
+            ("a", Arc::new(Int64Array::from(vec![1, 2])) as ArrayRef),
+            ("b", Arc::new(Float32Array::from(vec![1.0, f32::NAN]))),
+        ])
+        .unwrap();
+        let frame = frame(&rows, &["b"]).unwrap();
+        assert_eq!((frame.height(), frame.width()), (2, 1));
+        let back = batch(&frame).unwrap();
+        assert_eq!(back.column(0).null_count(), 1);
+        assert_eq!(super::frame(&rows, &[] as &[&str]).unwrap().height(), 2);
+        assert_eq!(super::frame(&rows, &["c"]).unwrap_err().place.column.as_deref(), Some("c"));
+    }
 }

@@ -42,7 +42,9 @@ impl Bins {
         }
         let steps = (to - from) / step;
         if steps > MOST_CELLS as f64 {
-            return Err(Error::plan(format!("The bins would be {steps:.0}; at most {MOST_CELLS} are possible. Use a larger `step`.")));
+            return Err(Error::plan(format!(
+                "The bins would be {steps:.0}; at most {MOST_CELLS} are possible. Use a larger `step`."
+            )));
         }
         let count = steps.round();
         if count < 1.0 || (steps - count).abs() > 1e-6 {
@@ -157,7 +159,8 @@ mod tests {
     fn every_value_is_in_one_cell() {
         let b = bins(0.0, 0.4, 0.1).unwrap();
         assert_eq!(b.cells(), 7);
-        let cases = [(-1e-300, 0), (0.0, 1), (-0.0, 1), (0.1, 2), (0.1_f64.next_down(), 1), (0.3, 4), (0.4, 5), (9.0, 5)];
+        let cases =
+            [(-1e-300, 0), (0.0, 1), (-0.0, 1), (0.1, 2), (0.1_f64.next_down(), 1), (0.3, 4), (0.4, 5), (9.0, 5)];
         for (x, cell) in cases {
             assert_eq!(b.cell(x), cell, "{x}");
         }

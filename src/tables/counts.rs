@@ -3,7 +3,9 @@
 
 use std::sync::Arc;
 
-use arrow::array::{Array, ArrayRef, AsArray, BooleanArray, Float32Array, Float64Array, RecordBatch, StringArray, UInt64Array};
+use arrow::array::{
+    Array, ArrayRef, AsArray, BooleanArray, Float32Array, Float64Array, RecordBatch, StringArray, UInt64Array,
+};
 use arrow::datatypes::{DataType, Field, Float32Type, Float64Type, Schema};
 use serde::{Deserialize, Serialize};
 
@@ -73,7 +75,14 @@ pub fn all(settings: &TablesSettings, names: &Names, schema: &Schema) -> Vec<(St
     for (i, one) in settings.colour_magnitude.iter().enumerate() {
         let key = format!("tables.colour_magnitude[{i}]");
         let axes = [
-            axis(colour(&one.colour, one.intrinsic, names, schema), "colour", &one.colour_bins, &key, "colour", "colour_bins"),
+            axis(
+                colour(&one.colour, one.intrinsic, names, schema),
+                "colour",
+                &one.colour_bins,
+                &key,
+                "colour",
+                "colour_bins",
+            ),
             axis(
                 absolute(&one.band, one.absolute, names, schema),
                 "absolute_magnitude",
@@ -136,11 +145,19 @@ fn counts(name: String, axes: Vec<Result<Axis>>, rows: Rows, schema: &Schema, ke
     let accepted_only = rows == Rows::Accepted;
     let boolean = schema.field_with_name(ACCEPTED).is_ok_and(|f| f.data_type() == &DataType::Boolean);
     if accepted_only && !boolean {
-        errors.push(Error::plan("The rows have no boolean column `accepted`; use `rows = \"all\"`.").at_key(format!("{key}.rows")));
+        errors.push(
+            Error::plan("The rows have no boolean column `accepted`; use `rows = \"all\"`.")
+                .at_key(format!("{key}.rows")),
+        );
     }
     let cells = good.iter().fold(1_usize, |n, axis| n.saturating_mul(axis.bins.cells()));
     if cells > MOST_CELLS + 9 {
-        errors.push(Error::plan(format!("The table would have {cells} cells; at most {MOST_CELLS} are possible. Use larger steps.")).at_key(key));
+        errors.push(
+            Error::plan(format!(
+                "The table would have {cells} cells; at most {MOST_CELLS} are possible. Use larger steps."
+            ))
+            .at_key(key),
+        );
     }
     Error::all(errors).map_or(Ok(Counts { name, axes: good, accepted_only }), Err)
 }
@@ -318,7 +335,8 @@ fn accepted(batch: &RecordBatch) -> Result<&BooleanArray> {
 
 fn values<'a>(batch: &'a RecordBatch, column: &str) -> Result<Values<'a>> {
     let failed = |message: &str| Error::failed(message).in_column(column);
-    let array = batch.column_by_name(column).ok_or_else(|| failed("is counted, but the rows that arrived do not have it"))?;
+    let array =
+        batch.column_by_name(column).ok_or_else(|| failed("is counted, but the rows that arrived do not have it"))?;
     if let Some(narrow) = array.as_primitive_opt::<Float32Type>() {
         return Ok(Values::Narrow(narrow));
     }
@@ -358,6 +376,7 @@ pub fn cut_counts(cuts: &[CutRow]) -> Result<Table> {
 }
 
 fn table(name: String, fields: Vec<Field>, arrays: Vec<ArrayRef>, description: String) -> Result<Table> {
-    let batch = RecordBatch::try_new(Arc::new(Schema::new(fields)), arrays).map_err(|e| Error::failed(e.to_string()))?;
+    let batch =
+        RecordBatch::try_new(Arc::new(Schema::new(fields)), arrays).map_err(|e| Error::failed(e.to_string()))?;
     Ok(Table { name, batch, description })
 }

@@ -118,13 +118,27 @@ mod tests {
     fn order_and_value_survive() {
         let ordered: [(Handed, Vec<Value>); 5] = [
             (Handed::Boolean, vec![Value::Boolean(false), Value::Boolean(true), Value::Null]),
-            (Handed::Integer, [i64::MIN, -1, 0, 1, i64::MAX].map(Value::Integer).into_iter().chain([Value::Null]).collect()),
+            (
+                Handed::Integer,
+                [i64::MIN, -1, 0, 1, i64::MAX].map(Value::Integer).into_iter().chain([Value::Null]).collect(),
+            ),
             (Handed::Unsigned, [0, 1, u64::MAX].map(Value::Unsigned).into_iter().chain([Value::Null]).collect()),
             (
                 Handed::Float64,
-                [-1e300, -1.0, -5e-324, 0.0, 5e-324, 1.0, 1e300].map(Value::Real).into_iter().chain([Value::Null]).collect(),
+                [-1e300, -1.0, -5e-324, 0.0, 5e-324, 1.0, 1e300]
+                    .map(Value::Real)
+                    .into_iter()
+                    .chain([Value::Null])
+                    .collect(),
             ),
-            (Handed::Text, ["", "\0", "\0a", "a", "a\0", "ab", "b", "\u{e9}"].map(Value::Text).into_iter().chain([Value::Null]).collect()),
+            (
+                Handed::Text,
+                ["", "\0", "\0a", "a", "a\0", "ab", "b", "\u{e9}"]
+                    .map(Value::Text)
+                    .into_iter()
+                    .chain([Value::Null])
+                    .collect(),
+            ),
         ];
         for (kind, values) in ordered {
             let keys: Vec<Vec<u8>> = values.iter().map(|v| key(v.clone())).collect();

@@ -175,7 +175,8 @@ impl Tally {
             return Ok(());
         }
         // One hand-over serves all queries.
-        let mut columns: Vec<&str> = tables.queries.iter().flat_map(|q| q.columns().iter().map(String::as_str)).collect();
+        let mut columns: Vec<&str> =
+            tables.queries.iter().flat_map(|q| q.columns().iter().map(String::as_str)).collect();
         columns.sort_unstable();
         columns.dedup();
         let frame = bridge::frame(batch, &columns)?;
@@ -212,7 +213,9 @@ impl Tally {
 }
 
 fn stranger() -> Error {
-    Error::failed("The counts of a finished part belong to other tables than the plan has; start the build anew with --overwrite.")
+    Error::failed(
+        "The counts of a finished part belong to other tables than the plan has; start the build anew with --overwrite.",
+    )
 }
 
 fn each_at(error: Error, key: &str) -> Vec<Error> {

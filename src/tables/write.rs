@@ -19,7 +19,8 @@ use crate::error::{Error, Result};
 /// # Errors
 /// A fault of the encoder.
 pub fn parquet(table: &Table) -> Result<Vec<u8>> {
-    let failed = |e: parquet::errors::ParquetError| Error::failed(format!("The table `{}` cannot be encoded: {e}", table.name));
+    let failed =
+        |e: parquet::errors::ParquetError| Error::failed(format!("The table `{}` cannot be encoded: {e}", table.name));
     let properties = WriterProperties::builder()
         .set_compression(Compression::ZSTD(ZstdLevel::try_new(3).map_err(failed)?))
         .set_created_by(concat!("tenparsec ", env!("CARGO_PKG_VERSION")).to_string())
@@ -62,7 +63,9 @@ fn columns(batch: &RecordBatch) -> Result<Vec<Cell<'_>>> {
             DataType::UInt64 => Box::new(move |i| array.as_primitive::<UInt64Type>().value(i).to_string()),
             DataType::Float32 => Box::new(move |i| short(array.as_primitive::<Float32Type>().value(i))),
             DataType::Float64 => Box::new(move |i| short(array.as_primitive::<Float64Type>().value(i))),
-            other => return Err(Error::failed(format!("A table has a column of type {other}.")).in_column(field.name())),
+            other => {
+                return Err(Error::failed(format!("A table has a column of type {other}.")).in_column(field.name()));
+            }
         };
         cells.push(Box::new(move |i| if array.is_null(i) { String::new() } else { value(i) }));
     }

@@ -68,9 +68,7 @@ impl BatchVerdict {
 
     /// Books the rows that are left, and returns their columns `verdict` and `accepted`.
     pub fn finish(self, counts: &mut CutCounts) -> (UInt32Array, BooleanArray) {
-        for (fails, missing) in self.fails.iter().zip(&self.missing) {
-            counts.book(self.judged, *fails, *missing);
-        }
+        counts.book_rows(self.judged, &self.fails, &self.missing);
         let accepted: BooleanBuffer = self.fails.iter().map(|f| *f == 0).collect();
         (UInt32Array::from(self.fails), BooleanArray::new(accepted, None))
     }

@@ -51,13 +51,17 @@ impl Cuts {
         let scope = Scope::of(schema);
         let mut errors = Vec::new();
         if settings.len() > MOST {
-            let message = format!("There are {} cuts; a verdict has room for {MOST}. Join some with AND.", settings.len());
+            let message =
+                format!("There are {} cuts; a verdict has room for {MOST}. Join some with AND.", settings.len());
             errors.push(Error::plan(message).at_key("cuts"));
         }
         let mut cuts = Vec::with_capacity(settings.len());
         for (i, one) in settings.iter().enumerate() {
             if one.name.trim().is_empty() {
-                errors.push(Error::plan("A cut needs a name, which its counts are shown under.").at_key(format!("cuts[{i}].name")));
+                errors.push(
+                    Error::plan("A cut needs a name, which its counts are shown under.")
+                        .at_key(format!("cuts[{i}].name")),
+                );
             }
             if let Some(first) = settings[..i].iter().position(|other| other.name == one.name) {
                 let message = format!("The name `{}` is already that of cuts[{first}]; names must differ.", one.name);
@@ -65,9 +69,9 @@ impl Cuts {
             }
             match Expression::condition(&one.keep, &scope) {
                 Ok((condition, read)) => cuts.push(Cut { settings: one.clone(), condition, read }),
-                Err(error) => errors.extend(error.each().map(|e| {
-                    Error { others: Vec::new(), ..e.clone() }.at_key(format!("cuts[{i}].keep"))
-                })),
+                Err(error) => errors.extend(
+                    error.each().map(|e| Error { others: Vec::new(), ..e.clone() }.at_key(format!("cuts[{i}].keep"))),
+                ),
             }
         }
         Error::all(errors).map_or(Ok(Self { cuts }), Err)

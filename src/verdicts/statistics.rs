@@ -181,12 +181,16 @@ fn compare(column: &Side, op: &Op, literal: &Side) -> Set {
     let orders = match (bounds, literal) {
         (Bounds::Integer(lo, hi), Side::Whole(n)) if i64::try_from(*n).is_ok() => Some((lo.cmp(n), hi.cmp(n))),
         (Bounds::Unsigned(lo, hi), Side::Whole(n)) if u64::try_from(*n).is_ok() => Some((lo.cmp(n), hi.cmp(n))),
-        (Bounds::Integer(lo, hi) | Bounds::Unsigned(lo, hi), Side::Whole(n)) => reals(*lo as f64, *hi as f64, *n as f64),
+        (Bounds::Integer(lo, hi) | Bounds::Unsigned(lo, hi), Side::Whole(n)) => {
+            reals(*lo as f64, *hi as f64, *n as f64)
+        }
         (Bounds::Integer(lo, hi) | Bounds::Unsigned(lo, hi), Side::Real(x)) => reals(*lo as f64, *hi as f64, *x),
         (Bounds::Real(lo, hi), Side::Real(x)) => reals(*lo, *hi, *x),
         (Bounds::Real(lo, hi), Side::Whole(n)) => reals(*lo, *hi, *n as f64),
         (Bounds::Boolean(lo, hi), Side::Boolean(b)) => Some((lo.cmp(b), hi.cmp(b))),
-        (Bounds::Text(lo, hi), Side::Text(t)) => Some((lo.as_slice().cmp(t.as_bytes()), hi.as_slice().cmp(t.as_bytes()))),
+        (Bounds::Text(lo, hi), Side::Text(t)) => {
+            Some((lo.as_slice().cmp(t.as_bytes()), hi.as_slice().cmp(t.as_bytes())))
+        }
         _ => None,
     };
     let values = match orders {
@@ -299,7 +303,9 @@ fn bounds(chunk: &ColumnChunkMetaData) -> Option<Bounds> {
                 _ => None,
             }
         }
-        Statistics::ByteArray(s) if decimal => scaled(big_endian(s.min_opt()?.data())?, big_endian(s.max_opt()?.data())?),
+        Statistics::ByteArray(s) if decimal => {
+            scaled(big_endian(s.min_opt()?.data())?, big_endian(s.max_opt()?.data())?)
+        }
         Statistics::FixedLenByteArray(s) if decimal => {
             scaled(big_endian(s.min_opt()?.data())?, big_endian(s.max_opt()?.data())?)
         }

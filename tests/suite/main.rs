@@ -1,6 +1,7 @@
 //! All integration tests in one binary, so that polars is linked once.
 
 mod draft;
+mod exact_sum;
 mod house;
 mod magnitudes;
 mod mock;

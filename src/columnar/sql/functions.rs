@@ -16,9 +16,7 @@ fn output(kind: Handed) -> impl Fn(&pl::Schema, &pl::Field) -> PolarsResult<pl::
 }
 
 fn output_many(kind: Handed) -> impl Fn(&pl::Schema, &[pl::Field]) -> PolarsResult<pl::Field> + 'static + Send + Sync {
-    move |_, fields| {
-        Ok(pl::Field::new(fields.first().map(|f| f.name().clone()).unwrap_or_default(), kind.polars()))
-    }
+    move |_, fields| Ok(pl::Field::new(fields.first().map(|f| f.name().clone()).unwrap_or_default(), kind.polars()))
 }
 
 /// f of a Float64 expression, null where the result is not finite.
@@ -26,7 +24,10 @@ pub fn real(argument: pl::Expr, f: fn(f64) -> f64) -> pl::Expr {
     argument.map(
         move |column| {
             let values = column.f64()?;
-            let result = pl::Float64Chunked::from_iter_options(values.name().clone(), values.iter().map(|x| x.map(f).filter(|y| y.is_finite())));
+            let result = pl::Float64Chunked::from_iter_options(
+                values.name().clone(),
+                values.iter().map(|x| x.map(f).filter(|y| y.is_finite())),
+            );
             Ok(result.into_column())
         },
         output(Handed::Float64),
@@ -38,9 +39,10 @@ pub fn real_of_two(a: pl::Expr, b: pl::Expr, f: fn(f64, f64) -> f64) -> pl::Expr
     a.map_many(
         move |columns| {
             let (a, b) = (columns[0].f64()?, columns[1].f64()?);
-            let result: pl::Float64Chunked = pl::arity::broadcast_binary_elementwise(a, b, |x: Option<f64>, y: Option<f64>| {
-                Some(f(x?, y?)).filter(|z| z.is_finite())
-            });
+            let result: pl::Float64Chunked =
+                pl::arity::broadcast_binary_elementwise(a, b, |x: Option<f64>, y: Option<f64>| {
+                    Some(f(x?, y?)).filter(|z| z.is_finite())
+                });
             Ok(result.into_column())
         },
         &[b],
@@ -84,7 +86,10 @@ pub fn finite(argument: pl::Expr, kind: Handed) -> pl::Expr {
                     if all_finite(values.downcast_iter().map(|a| a.values().as_slice()), |x: f32| x.is_finite()) {
                         return Ok(column);
                     }
-                    let result = pl::Float32Chunked::from_iter_options(values.name().clone(), values.iter().map(|x| x.filter(|x| x.is_finite())));
+                    let result = pl::Float32Chunked::from_iter_options(
+                        values.name().clone(),
+                        values.iter().map(|x| x.filter(|x| x.is_finite())),
+                    );
                     result.into_column()
                 }
                 _ => {
@@ -92,7 +97,10 @@ pub fn finite(argument: pl::Expr, kind: Handed) -> pl::Expr {
                     if all_finite(values.downcast_iter().map(|a| a.values().as_slice()), |x: f64| x.is_finite()) {
                         return Ok(column);
                     }
-                    let result = pl::Float64Chunked::from_iter_options(values.name().clone(), values.iter().map(|x| x.filter(|x| x.is_finite())));
+                    let result = pl::Float64Chunked::from_iter_options(
+                        values.name().clone(),
+                        values.iter().map(|x| x.filter(|x| x.is_finite())),
+                    );
                     result.into_column()
                 }
             })

@@ -1,7 +1,7 @@
 //! SQL expressions over the columns of a batch: read, checked against a schema, turned into polars expressions, run.
 //!
-//! The grammar is that of the sqlparser crate; what an expression means is fixed here, in `translate` (operators and
-//! types) and `functions`, rather than left to an engine's defaults, because conditions decide which stars a release
+//! The grammar is that of the sqlparser crate; what an expression means is fixed here, in `translate` (operators),
+//! `typed` (types) and `calls` (functions), rather than left to an engine's defaults, because conditions decide which stars a release
 //! holds. In short:
 //! - three-valued logic; a result that is not finite (1/0, `LN(-1)`, overflow) is null, never a large number;
 //! - 64-bit integer arithmetic that overflows is null; `/` is real division;
@@ -11,8 +11,10 @@
 //!
 //! Each expression is evaluated on its own and without polars' thread pool where its environment asks for one thread.
 
+mod calls;
 mod functions;
 mod translate;
+mod typed;
 
 use std::collections::BTreeMap;
 use std::sync::Arc;
@@ -24,15 +26,20 @@ use polars::prelude::IntoLazy;
 use sqlparser::ast;
 use sqlparser::dialect::GenericDialect;
 use sqlparser::parser::{Parser, ParserError};
-use sqlparser::tokenizer::Token;
+use sqlparser::tokenizer::{Token, Tokenizer};
 
 use super::bridge::{self, Handed};
 use crate::error::{Error, Result, suggestion};
 
-pub use translate::{arguments, is_aggregate, translate};
+pub use calls::{arguments, is_aggregate};
+pub use translate::translate;
+pub use typed::Typed;
 
 /// Longest SQL text that is read, in bytes; bounds the depth of what follows.
 const LONGEST: usize = 64 * 1024;
+/// Most words and signs in it, beside literals and commas: chains nest one level an operator, and trees are walked and
+/// freed recursively, so this keeps the stack of any thread safe. Lists of values may be long.
+const MOST_TOKENS: usize = 2000;
 
 /// Type of an SQL expression.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -69,7 +76,7 @@ pub struct Scope {
 }
 
 /// Where aggregates may stand: gives each the column that will hold its result.
-pub trait Aggregates: std::fmt::Debug {
+pub trait Aggregates: std::fmt::Debug + Send + Sync {
     /// Name and type of the result column of `function`.
     ///
     /// # Errors
@@ -186,6 +193,17 @@ pub fn parse_statement(text: &str) -> Result<ast::Statement> {
 fn check_length(text: &str) -> Result<()> {
     if text.len() > LONGEST {
         return Err(Error::plan(format!("The SQL text has {} bytes; at most {LONGEST} are read.", text.len())));
+    }
+    let tokens = Tokenizer::new(&GenericDialect {}, text).tokenize().map_err(|e| syntax(e.into()))?;
+    let plain = |t: &&Token| {
+        !matches!(t, Token::Whitespace(_) | Token::Comma | Token::Number(..) | Token::SingleQuotedString(_))
+    };
+    let count = tokens.iter().filter(plain).count();
+    if count > MOST_TOKENS {
+        return Err(Error::plan(format!(
+            "The SQL text is too long: {count} words and signs, of which at most {MOST_TOKENS} are read. Lists of values in \
+             IN (...) do not count."
+        )));
     }
     Ok(())
 }
@@ -312,7 +330,8 @@ impl Expression {
         }
         let lazy = frame.clone().lazy().select_seq([self.expression.clone().alias("value")]);
         let result = lazy.without_optimizations().collect().map_err(|e| Error::failed(plain(&e)))?;
-        let value = result.columns().first().cloned().ok_or_else(|| Error::failed("An SQL expression gave nothing."))?;
+        let value =
+            result.columns().first().cloned().ok_or_else(|| Error::failed("An SQL expression gave nothing."))?;
         if value.dtype() != &self.kind.polars() {
             return Err(Error::failed(format!(
                 "An SQL expression gave {} instead of {}; this is a fault of the program.",

@@ -6,91 +6,20 @@
 
 use polars::prelude as pl;
 use polars::prelude::Literal;
-use sqlparser::ast::{self, BinaryOperator as Op, Expr as Sql, UnaryOperator, Value};
+use sqlparser::ast::{self, BinaryOperator as Op, Expr as Sql, UnaryOperator};
 
 use super::functions as f;
+use super::typed::{
+    Number, Typed, alike, common, compare, constant, exact_integer, is_number, literal, meet, negate_if, quoted,
+};
 use super::{Kind, Scope, text_of};
 use crate::columnar::bridge::Handed;
-use crate::error::{Error, Result, suggestion};
+use crate::error::{Error, Result};
 
 use Handed::{Boolean, Float32, Float64, Integer, Text, Unsigned};
 
-/// Deepest tree that is translated; a chain of that many ANDs counts too.
-const DEEPEST: usize = 400;
-
-/// A number as written.
-#[derive(Debug, Clone, Copy, PartialEq)]
-enum Number {
-    Whole(i128),
-    Real(f64),
-}
-
-impl Number {
-    fn real(self) -> f64 {
-        match self {
-            Number::Whole(n) => n as f64,
-            Number::Real(x) => x,
-        }
-    }
-}
-
-/// A typed polars expression.
-#[derive(Debug, Clone)]
-pub struct Typed {
-    expr: pl::Expr,
-    /// Its type.
-    pub kind: Kind,
-    number: Option<Number>,
-}
-
-impl Typed {
-    fn of(expr: pl::Expr, kind: Handed) -> Self {
-        Self { expr, kind: Kind::Of(kind), number: None }
-    }
-
-    fn null() -> Self {
-        Self { expr: pl::lit(pl::NULL), kind: Kind::Null, number: None }
-    }
-
-    fn literal(number: Number) -> Self {
-        let kind = match number {
-            Number::Whole(n) if i64::try_from(n).is_ok() => Integer,
-            Number::Whole(n) if u64::try_from(n).is_ok() => Unsigned,
-            _ => Float64,
-        };
-        Self { expr: number_as(number, kind), kind: Kind::Of(kind), number: Some(number) }
-    }
-
-    /// The expression in type `to`, which is its own or one that numbers can be turned into.
-    pub fn into_expr(self, to: Handed) -> pl::Expr {
-        match (self.number, self.kind) {
-            (Some(number), _) if is_number(to) => number_as(number, to),
-            (_, Kind::Of(kind)) if kind == to => self.expr,
-            _ => self.expr.cast(to.polars()),
-        }
-    }
-}
-
-fn number_as(number: Number, kind: Handed) -> pl::Expr {
-    match (kind, number) {
-        (Integer, Number::Whole(n)) => constant(n as i64),
-        (Unsigned, Number::Whole(n)) => constant(n as u64),
-        (Float32, number) => constant(number.real() as f32),
-        (_, number) => constant(number.real()),
-    }
-}
-
-/// A literal of exactly this type; a plain polars literal would adapt to its surroundings.
-fn constant<T>(value: T) -> pl::Expr
-where
-    pl::Scalar: From<T>,
-{
-    pl::Expr::Literal(pl::LiteralValue::Scalar(pl::Scalar::from(value)))
-}
-
-fn is_number(kind: Handed) -> bool {
-    !matches!(kind, Boolean | Text)
-}
+/// Deepest tree that is translated. The parser allows 50 brackets; chains of AND and OR count as one level.
+const DEEPEST: usize = 100;
 
 /// Translates `sql` over the names of `scope`.
 ///
@@ -118,13 +47,13 @@ fn leaves(expr: &pl::Expr) -> Vec<String> {
         .collect()
 }
 
-struct Translator<'a> {
-    scope: &'a Scope,
+pub(super) struct Translator<'a> {
+    pub(super) scope: &'a Scope,
     depth: usize,
 }
 
 /// Both results, or the faults of both.
-fn both<A, B>(a: Result<A>, b: Result<B>) -> Result<(A, B)> {
+pub(super) fn both<A, B>(a: Result<A>, b: Result<B>) -> Result<(A, B)> {
     match (a, b) {
         (Ok(a), Ok(b)) => Ok((a, b)),
         (Err(a), Err(b)) => Err(Error::all(vec![a, b]).expect("two errors are not none")),
@@ -132,7 +61,7 @@ fn both<A, B>(a: Result<A>, b: Result<B>) -> Result<(A, B)> {
     }
 }
 
-fn all<T>(results: impl IntoIterator<Item = Result<T>>) -> Result<Vec<T>> {
+pub(super) fn all<T>(results: impl IntoIterator<Item = Result<T>>) -> Result<Vec<T>> {
     let (mut good, mut bad) = (Vec::new(), Vec::new());
     for result in results {
         match result {
@@ -144,7 +73,7 @@ fn all<T>(results: impl IntoIterator<Item = Result<T>>) -> Result<Vec<T>> {
 }
 
 impl Translator<'_> {
-    fn visit(&mut self, sql: &Sql) -> Result<Typed> {
+    pub(super) fn visit(&mut self, sql: &Sql) -> Result<Typed> {
         if self.depth >= DEEPEST {
             return Err(Error::plan("The SQL expression is too long a chain; split it into several."));
         }
@@ -163,7 +92,7 @@ impl Translator<'_> {
         match sql {
             Sql::Identifier(name) => self.column(&name.value),
             Sql::CompoundIdentifier(parts) => match parts.as_slice() {
-                [table, name] if self.scope.tables.contains(&table.value) => self.column(&name.value),
+                [table, name] if self.scope.tables.contains(&table.value) => self.visit(&Sql::Identifier(name.clone())),
                 _ => Err(Error::plan(format!(
                     "`{sql}` is read as a column of another table; a name with a dot needs double quotes."
                 ))),
@@ -236,7 +165,7 @@ impl Translator<'_> {
     }
 
     /// A text operand.
-    fn text(&mut self, sql: &Sql) -> Result<pl::Expr> {
+    pub(super) fn text(&mut self, sql: &Sql) -> Result<pl::Expr> {
         let typed = self.visit(sql)?;
         match typed.kind {
             Kind::Of(Text) | Kind::Null => Ok(typed.into_expr(Text)),
@@ -245,7 +174,7 @@ impl Translator<'_> {
     }
 
     /// A numeric operand and its type.
-    fn number(&mut self, sql: &Sql) -> Result<(Typed, Handed)> {
+    pub(super) fn number(&mut self, sql: &Sql) -> Result<(Typed, Handed)> {
         let typed = self.visit(sql)?;
         match typed.kind {
             Kind::Of(kind) if is_number(kind) => Ok((typed, kind)),
@@ -254,7 +183,7 @@ impl Translator<'_> {
         }
     }
 
-    fn real(&mut self, sql: &Sql) -> Result<pl::Expr> {
+    pub(super) fn real(&mut self, sql: &Sql) -> Result<pl::Expr> {
         Ok(self.number(sql)?.0.into_expr(Float64))
     }
 
@@ -279,16 +208,14 @@ impl Translator<'_> {
 
     fn binary(&mut self, left: &Sql, op: &Op, right: &Sql, whole: &Sql) -> Result<Typed> {
         match op {
-            Op::And | Op::Or | Op::Xor => {
+            Op::And | Op::Or => {
+                let chain = chain(whole, op);
+                let terms = all(chain.into_iter().map(|term| self.truth(term)))?;
+                Ok(Typed::of(balanced(terms, *op == Op::And), Boolean))
+            }
+            Op::Xor => {
                 let (a, b) = both(self.truth(left), self.truth(right))?;
-                Ok(Typed::of(
-                    match op {
-                        Op::And => a.and(b),
-                        Op::Or => a.or(b),
-                        _ => a.neq(b),
-                    },
-                    Boolean,
-                ))
+                Ok(Typed::of(a.neq(b), Boolean))
             }
             Op::Eq | Op::NotEq | Op::Lt | Op::LtEq | Op::Gt | Op::GtEq => {
                 let (a, b) = both(self.visit(left), self.visit(right))?;
@@ -307,14 +234,14 @@ impl Translator<'_> {
                 let (a, b) = both(self.text(left), self.text(right))?;
                 Ok(Typed::of(f::join_texts(a, b), Text))
             }
-            Op::PGExp | Op::BitwiseXor => Err(Error::plan(format!(
-                "`{op}` in `{whole}` is not supported; write a power as `POWER(x, y)`."
-            ))),
+            Op::PGExp | Op::BitwiseXor => {
+                Err(Error::plan(format!("`{op}` in `{whole}` is not supported; write a power as `POWER(x, y)`.")))
+            }
             other => Err(Error::plan(format!("The operator `{other}` in `{whole}` is not supported."))),
         }
     }
 
-    fn arithmetic(&mut self, left: &Sql, op: &Op, right: &Sql) -> Result<Typed> {
+    pub(super) fn arithmetic(&mut self, left: &Sql, op: &Op, right: &Sql) -> Result<Typed> {
         let ((a, ka), (b, kb)) = both(self.number(left), self.number(right))?;
         let kind = meet(&a, ka, &b, kb);
         if *op == Op::Divide {
@@ -444,7 +371,7 @@ impl Translator<'_> {
     }
 
     /// FLOOR and its like: integers stay, floats keep their type.
-    fn rounded(&mut self, argument: &Sql, f: fn(f64) -> f64) -> Result<Typed> {
+    pub(super) fn rounded(&mut self, argument: &Sql, f: fn(f64) -> f64) -> Result<Typed> {
         let (typed, kind) = self.number(argument)?;
         Ok(match kind {
             Float32 | Float64 => {
@@ -455,7 +382,7 @@ impl Translator<'_> {
         })
     }
 
-    fn substring(&mut self, value: &Sql, from: Option<&Sql>, count: Option<&Sql>) -> Result<Typed> {
+    pub(super) fn substring(&mut self, value: &Sql, from: Option<&Sql>, count: Option<&Sql>) -> Result<Typed> {
         let whole = |typed: Option<Result<Typed>>| match typed.transpose()?.map(|t| t.number) {
             None => Ok(None),
             Some(Some(Number::Whole(n))) => Ok(Some(n)),
@@ -475,137 +402,6 @@ impl Translator<'_> {
         };
         Ok(Typed::of(f::change_text(self.text(value)?, cut), Text))
     }
-
-    fn function(&mut self, function: &ast::Function) -> Result<Typed> {
-        let name = function.name.to_string().to_lowercase();
-        if function.over.is_some() {
-            return Err(Error::plan(format!("`{function}` is a window function; an expression here sees one row at a time.")));
-        }
-        if is_aggregate(&name) {
-            if let Some(aggregates) = &self.scope.aggregates {
-                return aggregates.column(function).map(|(name, kind)| Typed::of(pl::col(name), kind));
-            }
-            return Err(Error::plan(format!(
-                "`{function}` is an aggregate over many rows, which cannot stand here; an expression here sees one row at a time."
-            )));
-        }
-        let arguments = arguments(function)?;
-        let one = |arguments: &[&Sql]| match arguments {
-            [x] => Ok((*x).clone()),
-            other => Err(wrong_count(&name, "one argument", other.len())),
-        };
-        let two = |arguments: &[&Sql]| match arguments {
-            [x, y] => Ok(((*x).clone(), (*y).clone())),
-            other => Err(wrong_count(&name, "two arguments", other.len())),
-        };
-        let real: Option<fn(f64) -> f64> = match name.as_str() {
-            "sqrt" => Some(f64::sqrt),
-            "cbrt" => Some(libm::cbrt),
-            "exp" => Some(libm::exp),
-            "ln" => Some(libm::log),
-            "log10" => Some(libm::log10),
-            "log2" => Some(libm::log2),
-            "sin" => Some(libm::sin),
-            "cos" => Some(libm::cos),
-            "tan" => Some(libm::tan),
-            "asin" => Some(libm::asin),
-            "acos" => Some(libm::acos),
-            "atan" => Some(libm::atan),
-            "degrees" => Some(f64::to_degrees),
-            "radians" => Some(f64::to_radians),
-            _ => None,
-        };
-        if let Some(f) = real {
-            return Ok(Typed::of(f::real(self.real(&one(&arguments)?)?, f), Float64));
-        }
-        match name.as_str() {
-            "abs" => {
-                let argument = one(&arguments)?;
-                let (typed, kind) = self.number(&argument)?;
-                match kind {
-                    Integer => Ok(Typed::of(f::integer(typed.into_expr(Integer), i64::checked_abs), Integer)),
-                    Unsigned => Ok(typed),
-                    _ => self.rounded(&argument, f64::abs),
-                }
-            }
-            "ceil" | "ceiling" => self.rounded(&one(&arguments)?, libm::ceil),
-            "floor" => self.rounded(&one(&arguments)?, libm::floor),
-            "trunc" => self.rounded(&one(&arguments)?, libm::trunc),
-            "round" => self.rounded(&one(&arguments)?, libm::round),
-            "sign" => self.rounded(&one(&arguments)?, |x| if x == 0.0 { 0.0 } else { 1.0_f64.copysign(x) }),
-            "power" | "pow" | "atan2" | "mod" => {
-                let (x, y) = two(&arguments)?;
-                if name == "mod" {
-                    return self.arithmetic(&x, &Op::Modulo, &y);
-                }
-                let f = if name == "atan2" { libm::atan2 } else { libm::pow };
-                let (x, y) = both(self.real(&x), self.real(&y))?;
-                Ok(Typed::of(f::real_of_two(x, y, f), Float64))
-            }
-            "coalesce" => {
-                let values = all(arguments.iter().map(|a| self.visit(a)))?;
-                let kind = common_named(&values, &function.to_string())?;
-                let values = values.into_iter().map(|v| v.into_expr(kind));
-                let expr = values.rev().reduce(|rest, value| {
-                    pl::when(value.clone().is_not_null()).then(value).otherwise(rest)
-                });
-                expr.map(|e| Typed::of(e, kind)).ok_or_else(|| wrong_count(&name, "an argument", 0))
-            }
-            "nullif" => {
-                let (x, y) = two(&arguments)?;
-                let (x, y) = both(self.visit(&x), self.visit(&y))?;
-                let Kind::Of(kind) = x.kind else { return Ok(Typed::null()) };
-                let value = x.clone().into_expr(kind);
-                let (a, b) = alike_named(x, y, &function.to_string())?;
-                let same = a.eq(b).fill_null(pl::lit(false));
-                Ok(Typed::of(pl::when(same.not()).then(value).otherwise(pl::lit(pl::NULL).cast(kind.polars())), kind))
-            }
-            "lower" => Ok(Typed::of(f::change_text(self.text(&one(&arguments)?)?, str::to_lowercase), Text)),
-            "upper" => Ok(Typed::of(f::change_text(self.text(&one(&arguments)?)?, str::to_uppercase), Text)),
-            "length" | "char_length" => Ok(Typed::of(f::length(self.text(&one(&arguments)?)?), Integer)),
-            "substr" => match arguments.as_slice() {
-                [x, from] => self.substring(x, Some(from), None),
-                [x, from, count] => self.substring(x, Some(from), Some(count)),
-                other => Err(wrong_count(&name, "two or three arguments", other.len())),
-            },
-            "starts_with" | "ends_with" => {
-                let (x, y) = two(&arguments)?;
-                let Some(part) = quoted(&y) else {
-                    return Err(Error::plan(format!("`{function}` needs its second argument in single quotes.")));
-                };
-                let starts = name == "starts_with";
-                let test = move |x: &str| if starts { x.starts_with(&part) } else { x.ends_with(&part) };
-                Ok(Typed::of(f::test_text(self.text(&x)?, test), Boolean))
-            }
-            "log" => Err(Error::plan("`LOG` means different things in different places; write LN or LOG10.")),
-            "isnan" | "is_nan" | "isfinite" | "isinf" => Err(Error::plan(format!(
-                "`{function}` is not needed: a value that is not finite is missing here. Write `x IS NULL` or `x IS NOT NULL`."
-            ))),
-            _ => Err(Error::plan(format!("There is no function `{name}`.{}", suggestion(&name, FUNCTIONS)))),
-        }
-    }
-}
-
-/// Functions of one row.
-const FUNCTIONS: [&str; 35] = [
-    "abs", "acos", "asin", "atan", "atan2", "cbrt", "ceil", "char_length", "coalesce", "cos", "degrees", "ends_with",
-    "exp", "floor", "length", "ln", "log10", "log2", "lower", "mod", "nullif", "power", "radians", "round", "sign",
-    "sin", "sqrt", "starts_with", "substr", "substring", "tan", "trim", "trunc", "upper", "ceiling",
-];
-
-/// True for the name of a function over many rows, whether a query can compute it or not.
-pub fn is_aggregate(name: &str) -> bool {
-    const NAMES: [&str; 36] = [
-        "count", "sum", "avg", "mean", "min", "max", "stddev", "stddev_samp", "stddev_pop", "variance", "var_samp",
-        "var_pop", "stdev", "stdev_samp", "var", "median", "mode", "quantile", "quantile_cont", "quantile_disc",
-        "percentile_cont", "percentile_disc", "first", "last", "any_value", "array_agg", "string_agg", "group_concat",
-        "corr", "covar_pop", "covar_samp", "bit_and", "bit_or", "bit_xor", "every", "total",
-    ];
-    NAMES.contains(&name)
-}
-
-fn wrong_count(name: &str, needs: &str, got: usize) -> Error {
-    Error::plan(format!("The function `{name}` takes {needs}, not {got}."))
 }
 
 fn unsigned(sql: &Sql) -> Error {
@@ -615,156 +411,33 @@ fn unsigned(sql: &Sql) -> Error {
     ))
 }
 
-/// The plain arguments of a function.
-pub fn arguments(function: &ast::Function) -> Result<Vec<&Sql>> {
-    use ast::{FunctionArg, FunctionArgExpr, FunctionArguments};
-    let odd = || Error::plan(format!("`{function}` is written in a way that is not supported; use `name(argument, ...)`."));
-    let list = match &function.args {
-        FunctionArguments::List(list) if list.duplicate_treatment.is_none() && list.clauses.is_empty() => &list.args,
-        _ => return Err(odd()),
-    };
-    let plain = function.filter.is_none() && function.within_group.is_empty() && function.null_treatment.is_none();
-    if !plain || !matches!(function.parameters, FunctionArguments::None) {
-        return Err(odd());
+/// The terms of a chain of one operator, which the parser nests to the left.
+fn chain<'a>(mut sql: &'a Sql, op: &Op) -> Vec<&'a Sql> {
+    let mut terms = Vec::new();
+    while let Sql::BinaryOp { left, op: this, right } = sql
+        && this == op
+    {
+        terms.push(right.as_ref());
+        sql = left;
     }
-    list.iter()
-        .map(|argument| match argument {
-            FunctionArg::Unnamed(FunctionArgExpr::Expr(expr)) => Ok(expr),
-            _ => Err(odd()),
-        })
-        .collect()
+    terms.push(sql);
+    terms.reverse();
+    terms
 }
 
-fn negate_if(negated: bool, expr: pl::Expr) -> Typed {
-    Typed::of(if negated { expr.not() } else { expr }, Boolean)
-}
-
-fn quoted(sql: &Sql) -> Option<String> {
-    match sql {
-        Sql::Value(ast::ValueWithSpan { value: Value::SingleQuotedString(text), .. }) => Some(text.clone()),
-        Sql::Nested(inner) => quoted(inner),
-        _ => None,
-    }
-}
-
-fn literal(value: &Value) -> Result<Typed> {
-    match value {
-        Value::Number(text, _) => {
-            let number = if text.contains(['.', 'e', 'E']) { None } else { text.parse::<i128>().ok() };
-            if let Some(whole) = number {
-                return Ok(Typed::literal(Number::Whole(whole)));
-            }
-            match text.parse::<f64>() {
-                Ok(x) if x.is_finite() => Ok(Typed::literal(Number::Real(x))),
-                _ => Err(Error::plan(format!("`{text}` is not a number that a 64-bit float can hold."))),
-            }
+/// AND or OR of all terms as a balanced tree: as deep as the logarithm of their number.
+fn balanced(mut terms: Vec<pl::Expr>, and: bool) -> pl::Expr {
+    while terms.len() > 1 {
+        let mut pairs = Vec::with_capacity(terms.len().div_ceil(2));
+        let mut rest = terms.into_iter();
+        while let Some(a) = rest.next() {
+            pairs.push(match rest.next() {
+                Some(b) if and => a.and(b),
+                Some(b) => a.or(b),
+                None => a,
+            });
         }
-        Value::SingleQuotedString(text) => Ok(Typed::of(text.as_str().lit(), Text)),
-        Value::Boolean(b) => Ok(Typed::of(b.lit(), Boolean)),
-        Value::Null => Ok(Typed::null()),
-        other => Err(Error::plan(format!("The literal `{other}` is not supported; use numbers, 'text', TRUE, FALSE, NULL."))),
+        terms = pairs;
     }
-}
-
-/// The integer that equals `number`, if one does.
-fn exact_integer(number: Number) -> Option<i64> {
-    match number {
-        Number::Whole(n) => i64::try_from(n).ok(),
-        Number::Real(x) if x.fract() == 0.0 && x.abs() < 9.2e18 => Some(x as i64),
-        Number::Real(_) => None,
-    }
-}
-
-/// The type in which two numbers meet; `None` for an unsigned one beside a signed column.
-fn meet(a: &Typed, ka: Handed, b: &Typed, kb: Handed) -> Option<Handed> {
-    let literal_meets = |literal: Number, kind: Handed| match (literal, kind) {
-        (_, Float32 | Float64) => kind,
-        (Number::Whole(n), Integer) if i64::try_from(n).is_ok() => Integer,
-        (Number::Whole(n), Unsigned) if u64::try_from(n).is_ok() => Unsigned,
-        _ => Float64,
-    };
-    match (a.number, b.number) {
-        (Some(_), Some(_)) => Some(if (ka, kb) == (Integer, Integer) { Integer } else { Float64 }),
-        (Some(a), None) => Some(literal_meets(a, kb)),
-        (None, Some(b)) => Some(literal_meets(b, ka)),
-        (None, None) if ka == kb => Some(ka),
-        (None, None) if (ka == Unsigned && kb == Integer) || (ka == Integer && kb == Unsigned) => None,
-        (None, None) => Some(Float64),
-    }
-}
-
-fn alike(a: Typed, b: Typed, whole: &Sql) -> Result<(pl::Expr, pl::Expr)> {
-    alike_named(a, b, &whole.to_string())
-}
-
-/// Both sides of a comparison in one type.
-fn alike_named(a: Typed, b: Typed, whole: &str) -> Result<(pl::Expr, pl::Expr)> {
-    let kind = match (a.kind, b.kind) {
-        (Kind::Null, Kind::Null) => Boolean,
-        (Kind::Of(kind), Kind::Null) | (Kind::Null, Kind::Of(kind)) => kind,
-        (Kind::Of(ka), Kind::Of(kb)) if is_number(ka) && is_number(kb) => meet(&a, ka, &b, kb).ok_or_else(|| {
-            Error::plan(format!(
-                "`{whole}` compares an unsigned 64-bit column with a signed one; write CAST(... AS BIGINT) around the unsigned one."
-            ))
-        })?,
-        (Kind::Of(ka), Kind::Of(kb)) if ka == kb => ka,
-        (ka, kb) => {
-            let hint = match (ka, kb) {
-                (Kind::Of(Text), Kind::Of(_)) | (Kind::Of(_), Kind::Of(Text)) => {
-                    " Numbers are written without quotes, text with single quotes."
-                }
-                _ => "",
-            };
-            return Err(Error::plan(format!("`{whole}` compares {} with {}.{hint}", ka.words(), kb.words())));
-        }
-    };
-    Ok((a.into_expr(kind), b.into_expr(kind)))
-}
-
-fn compare(a: Typed, op: &Op, b: Typed, whole: &Sql) -> Result<Typed> {
-    let booleans = matches!((a.kind, b.kind), (Kind::Of(Boolean), _) | (_, Kind::Of(Boolean)));
-    if booleans && !matches!(op, Op::Eq | Op::NotEq) {
-        return Err(Error::plan(format!("`{whole}` orders booleans; use `=`, `<>`, AND, OR, NOT.")));
-    }
-    let (a, b) = alike(a, b, whole)?;
-    let expr = match op {
-        Op::Eq => a.eq(b),
-        Op::NotEq => a.neq(b),
-        Op::Lt => a.lt(b),
-        Op::LtEq => a.lt_eq(b),
-        Op::Gt => a.gt(b),
-        _ => a.gt_eq(b),
-    };
-    Ok(Typed::of(expr, Boolean))
-}
-
-fn common(values: &[Typed], whole: &Sql) -> Result<Handed> {
-    common_named(values, &whole.to_string())
-}
-
-/// The one type that all values can take.
-fn common_named(values: &[Typed], whole: &str) -> Result<Handed> {
-    let mut known: Option<Typed> = None;
-    for value in values.iter().filter(|v| v.kind != Kind::Null) {
-        known = Some(match known {
-            None => value.clone(),
-            Some(so_far) => {
-                let (Kind::Of(ka), Kind::Of(kb)) = (so_far.kind, value.kind) else { return Ok(Float64) };
-                let kind = if is_number(ka) && is_number(kb) {
-                    meet(&so_far, ka, value, kb)
-                } else {
-                    (ka == kb).then_some(ka)
-                };
-                let kind = kind.ok_or_else(|| {
-                    Error::plan(format!("`{whole}` mixes {} and {}.", so_far.kind.words(), value.kind.words()))
-                })?;
-                let literal = so_far.number.is_some() && value.number.is_some();
-                Typed { number: if literal { value.number } else { None }, ..Typed::of(so_far.expr, kind) }
-            }
-        });
-    }
-    match known.map(|k| k.kind) {
-        Some(Kind::Of(kind)) => Ok(kind),
-        _ => Ok(Float64),
-    }
+    terms.pop().unwrap_or_else(|| and.lit())
 }

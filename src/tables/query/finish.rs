@@ -34,8 +34,12 @@ impl Query {
         let groups = self.groups(tally)?;
         let evaluate = |e: &Expression| bridge::array(e.evaluate_on(&groups)?.as_materialized_series());
         let selected = self.selected.iter().map(|(_, e)| evaluate(e)).collect::<Result<Vec<ArrayRef>>>()?;
-        let fields: Vec<Field> =
-            self.selected.iter().zip(&selected).map(|((name, _), a)| Field::new(name, a.data_type().clone(), true)).collect();
+        let fields: Vec<Field> = self
+            .selected
+            .iter()
+            .zip(&selected)
+            .map(|((name, _), a)| Field::new(name, a.data_type().clone(), true))
+            .collect();
         let failed = |e: arrow::error::ArrowError| Error::failed(e.to_string());
         let mut batch = RecordBatch::try_new(Arc::new(Schema::new(fields)), selected).map_err(failed)?;
 

@@ -220,34 +220,49 @@ impl Query {
     }
 
     /// The group of each row; [`accumulate::NONE`] for rows that WHERE leaves out.
-    fn groups_of_rows(&self, tally: &mut QueryTally, frame: &pl::DataFrame, wanted: Option<&[bool]>) -> Result<Vec<u32>> {
+    fn groups_of_rows(
+        &self,
+        tally: &mut QueryTally,
+        frame: &pl::DataFrame,
+        wanted: Option<&[bool]>,
+    ) -> Result<Vec<u32>> {
         let rows = frame.height();
         let is_wanted = |row: usize| wanted.is_none_or(|w| w[row]);
         if self.keys.is_empty() {
             return Ok((0..rows).map(|row| if is_wanted(row) { 0 } else { accumulate::NONE }).collect());
         }
-        let mut bytes: Vec<Vec<u8>> = vec![Vec::new(); rows];
+        // The bytes of each key column one after another, with the end of each row's: nothing is allocated by the row.
+        let mut columns: Vec<(Vec<u8>, Vec<usize>)> = Vec::with_capacity(self.keys.len());
         for key in &self.keys {
-            let values = key.evaluate_on(frame)?;
-            accumulate::each_value(&values, |row, value| {
+            let (mut bytes, mut ends) = (Vec::with_capacity(9 * rows), Vec::with_capacity(rows));
+            accumulate::each_value(&key.evaluate_on(frame)?, |row, value| {
                 if is_wanted(row) {
-                    keys::write(&mut bytes[row], &value);
+                    keys::write(&mut bytes, &value);
                 }
+                ends.push(bytes.len());
             })?;
+            columns.push((bytes, ends));
         }
         // Neighbours are often of one group: the last answer saves most look-ups.
-        let mut last: Option<(usize, u32)> = None;
+        let mut last: Option<u32> = None;
+        let (mut key, mut before) = (Vec::new(), Vec::new());
         let mut groups = Vec::with_capacity(rows);
         for row in 0..rows {
             if !is_wanted(row) {
                 groups.push(accumulate::NONE);
                 continue;
             }
+            key.clear();
+            for (bytes, ends) in &columns {
+                let start = if row == 0 { 0 } else { ends[row - 1] };
+                key.extend_from_slice(&bytes[start..ends[row]]);
+            }
             let group = match last {
-                Some((before, group)) if bytes[before] == bytes[row] => group,
-                _ => tally.group(&bytes[row])?,
+                Some(group) if key == before => group,
+                _ => tally.group(&key)?,
             };
-            last = Some((row, group));
+            last = Some(group);
+            std::mem::swap(&mut key, &mut before);
             groups.push(group);
         }
         Ok(groups)

@@ -53,10 +53,16 @@ impl Query {
             };
             match Expression::new(&meant, &row) {
                 Ok(checked) if checked.columns().is_empty() => {
-                    keep(Error::plan(format!("GROUP BY `{key}` names no column, so all rows are one group; leave it out.")));
+                    keep(Error::plan(format!(
+                        "GROUP BY `{key}` names no column, so all rows are one group; leave it out."
+                    )));
                 }
                 Ok(checked) => {
-                    grouped.replace(text_of(&meant), key_name(keys.len()), checked.kind());
+                    let bare = match &meant {
+                        Sql::CompoundIdentifier(parts) => parts.last().map(|name| Sql::Identifier(name.clone())),
+                        _ => None,
+                    };
+                    grouped.replace(text_of(bare.as_ref().unwrap_or(&meant)), key_name(keys.len()), checked.kind());
                     keys.push(checked);
                 }
                 Err(error) => keep(error),
@@ -159,7 +165,9 @@ fn plain_select(query: &ast::Query) -> Result<(&ast::Select, String)> {
 fn boolean(expression: &Sql, scope: &Scope, clause: &str) -> Result<Expression> {
     let checked = Expression::new(expression, scope)?;
     if checked.kind() != Handed::Boolean {
-        return Err(Error::plan(format!("`{expression}` after {clause} is not a condition; compare it with something.")));
+        return Err(Error::plan(format!(
+            "`{expression}` after {clause} is not a condition; compare it with something."
+        )));
     }
     Ok(checked)
 }
@@ -176,7 +184,9 @@ fn named(item: &ast::SelectItem) -> Result<(String, Sql)> {
             },
             expr.clone(),
         )),
-        other => Err(Error::plan(format!("`{other}` selects whole rows; name the columns of GROUP BY and aggregates such as COUNT(*)."))),
+        other => Err(Error::plan(format!(
+            "`{other}` selects whole rows; name the columns of GROUP BY and aggregates such as COUNT(*)."
+        ))),
     }
 }
 
@@ -222,7 +232,8 @@ fn limits(query: &ast::Query) -> Result<(usize, Option<usize>)> {
         Sql::Value(ast::ValueWithSpan { value: ast::Value::Number(text, _), .. }) => text.parse::<usize>().ok(),
         _ => None,
     };
-    let count = |e: &Sql| count(e).ok_or_else(|| Error::plan(format!("LIMIT and OFFSET take a whole number, not `{e}`.")));
+    let count =
+        |e: &Sql| count(e).ok_or_else(|| Error::plan(format!("LIMIT and OFFSET take a whole number, not `{e}`.")));
     match &query.limit_clause {
         None => Ok((0, None)),
         Some(ast::LimitClause::LimitOffset { limit, offset, limit_by }) if limit_by.is_empty() => {
@@ -302,10 +313,12 @@ fn aggregate(call: &ast::Function, row: &Scope) -> Result<Aggregate> {
         return Err(Error::plan(format!("`{call}` takes one argument, not {}.", arguments.len())));
     };
     let argument = Expression::new(argument, row)?;
-    let numeric = !matches!(argument.kind(), Handed::Text);
-    let variance = matches!(function, Function::Variance { .. });
-    let countable = !(variance && argument.kind() == Handed::Boolean);
-    if !matches!(function, Function::Count | Function::Min | Function::Max) && !(numeric && countable) {
+    let fits = match function {
+        Function::Count | Function::Min | Function::Max => true,
+        Function::Sum | Function::Mean => argument.kind() != Handed::Text,
+        Function::Variance { .. } => !matches!(argument.kind(), Handed::Text | Handed::Boolean),
+    };
+    if !fits {
         return Err(Error::plan(format!("`{call}` needs numbers.")));
     }
     Ok(Aggregate { text, function, argument: Some(argument), filter })
