@@ -79,6 +79,11 @@ impl Summary {
     }
 }
 
+/// "1 value", "1,200 values".
+fn values(count: u64) -> String {
+    format!("{} {}", show_count(count), if count == 1 { "value" } else { "values" })
+}
+
 fn plural(count: usize, word: &str) -> String {
     if count == 1 { word.to_owned() } else { format!("{word}s") }
 }
@@ -111,8 +116,8 @@ pub fn notes(job: &Job, total: &Tally) -> Vec<String> {
     for (load, unusable) in job.pipeline.loads().iter().zip(&total.unusable) {
         if unusable.not_finite > 0 {
             notes.push(format!(
-                "{} values of `{}` are NaN or infinite and were taken as missing.",
-                show_count(unusable.not_finite),
+                "{} of `{}` NaN or infinite, taken as missing.",
+                values(unusable.not_finite),
                 load.column
             ));
         }
@@ -122,8 +127,8 @@ pub fn notes(job: &Job, total: &Tally) -> Vec<String> {
                 _ => "negative",
             };
             notes.push(format!(
-                "{} values of `{}` are {what}, which no standard error is; they were taken as missing.",
-                show_count(unusable.out_of_domain),
+                "{} of `{}` {what}, which no standard error can be; taken as missing.",
+                values(unusable.out_of_domain),
                 load.column
             ));
         }

@@ -163,7 +163,7 @@ fn impossible_values_are_missing_counted_and_said() {
     world.plan(&PLAN.replace("[bands.G]", "ra = \"ra\"\ndec = \"dec\"\n[bands.G]"));
     let said = world.build();
     assert_eq!(said.code, 0, "{}", said.err);
-    for words in ["5 values of `parallax` are NaN or infinite", "2 values of `parallax_error` are zero or negative", "`dec` leaves the range"] {
+    for words in ["5 values of `parallax` NaN or infinite", "2 values of `parallax_error` zero or negative", "`dec` leaves the range"] {
         assert!(said.out.contains(words), "{words}: {}", said.out);
     }
     let rows = crate::world::rows_of(&world.path("release"));
