@@ -137,12 +137,15 @@ impl Progress {
             left if left.is_finite() && rows > 0 => format!("{} left", show_time(left)),
             _ => "time left unknown".to_owned(),
         };
+        let bytes = match bytes {
+            0 => String::new(), // nothing is read
+            bytes => format!("  {}/s", show_size((bytes as f64 / seconds) as u64)),
+        };
         format!(
-            "{} of {} rows  {} rows/s  {}/s  {left}",
+            "{} of {} rows  {} rows/s{bytes}  {left}",
             show_count(rows),
             show_count(self.total_rows),
-            show_count(per_second as u64),
-            show_size((bytes as f64 / seconds) as u64)
+            show_count(per_second as u64)
         )
     }
 
