@@ -1,7 +1,7 @@
 """Live comparison with astropy on a small catalogue that this file writes.
 
-Parallax errors are a millionth of the parallax, so that the posterior must sit on the direct value: bands by magnitude
-and by flux, extinction by a column of A_V, colours with errors, a zero point, and galaxies of tests/reference as stars.
+Parallax errors are 1e-4 of the parallax, so that the posterior must sit on the direct value but for a shift of second
+order: bands by magnitude and by flux, extinction by a column of A_V, colours with errors, a zero point, and galaxies of tests/reference as stars.
 """
 
 import numpy as np
@@ -15,7 +15,8 @@ import program
 from conftest import reference_rows
 
 OFFSET_MAS = -0.021
-RELATIVE = 1e-6
+RELATIVE = 1e-4
+LENGTH_KPC = 1.35
 RATIO = {"G": 0.84, "B": 1.05, "R": 0.61}
 ZERO_POINT = 25.7
 
@@ -137,6 +138,23 @@ def distance(catalogue):
     return Distance(parallax=(column(catalogue, "parallax") - OFFSET_MAS) * units.mas)
 
 
+def pull(distance):
+    """How far, in mag, the prior may draw the posterior of a parallax with relative error r off the direct value, at most.
+
+    The log density has slope 2 or 3 less d/L from the prior and curvature 1/r^2 from the parallax; skewness adds terms
+    of r^2 too: (5 / ln 10) (5 + d/L) r^2. 2e-6 mag is what the program may err by.
+    """
+    return 5 / np.log(10) * (5 + distance.to_value(units.kpc) / LENGTH_KPC) * RELATIVE**2 + 2e-6
+
+
+def within(got, expected, tolerance, name):
+    miss = np.abs(got - expected) / tolerance
+    worst = int(np.nanargmax(np.where(np.isnan(miss), np.inf, miss)))
+    assert miss[worst] <= 1, (
+        f"{name}, row {worst}: {got[worst]!r} for {expected[worst]!r}, {miss[worst]} times the tolerance"
+    )
+
+
 def test_astropy_has_the_constants_of_the_reference():
     """The constants of tests/reference, which the Rust tests hold the program to, against astropy's."""
     import tomllib
@@ -167,38 +185,40 @@ def test_calibrated_parallax(made, catalogue, distance):
 
 
 def test_modulus_is_astropys(made, distance):
-    """The posterior has a width of 2.2e-6 mag here; its centre must sit on the direct value."""
     for name in ("modulus_p50", "modulus_mean", "modulus_mode"):
-        np.testing.assert_allclose(column(made, name), distance.distmod.value, rtol=0, atol=1e-6, err_msg=name)
+        within(column(made, name), distance.distmod.value, pull(distance), name)
     width = 5 / np.log(10) * RELATIVE
+    # Sd and half-widths: first order in r; the prior's curvature d/L r^2 is what is left, 6e-5 at the farthest.
     np.testing.assert_allclose(column(made, "modulus_sd"), width, rtol=0.01)
     np.testing.assert_allclose(column(made, "modulus_p84") - column(made, "modulus_p50"), width, rtol=0.01)
     np.testing.assert_allclose(column(made, "modulus_p50") - column(made, "modulus_p16"), width, rtol=0.01)
 
 
 def test_distance_is_astropys(made, distance):
-    """1e-6 mag are 4.6e-7 of the distance. And astropy's modulus of the program's distance is the program's modulus."""
+    """And astropy's modulus of the program's distance is the program's modulus."""
     for q in ("p16", "p50", "p84"):
         own = column(made, f"distance_{q}")
         back = Distance(own * units.pc).distmod.value
         np.testing.assert_allclose(back, column(made, f"modulus_{q}"), rtol=0, atol=1e-12)
-    np.testing.assert_allclose(column(made, "distance_p50"), distance.to_value(units.pc), rtol=4.6e-7)
+    relative = column(made, "distance_p50") / distance.to_value(units.pc)
+    within(relative, np.ones_like(relative), pull(distance) * np.log(10) / 5, "distance_p50 over astropy's")
 
 
-def test_published_moduli_of_galaxies(made):
+def test_published_moduli_of_galaxies(made, distance):
     """LMC, NGC 4258 and M31 as stars with parallax 1/d: the printed modulus within the rounding of the printed pair."""
     for i, galaxy in enumerate(reference_rows("distance_moduli.csv")):
         row = 60 + i
         modulus = column(made, "modulus_p50")[row]
-        assert abs(modulus - float(galaxy["modulus_mag"])) < float(galaxy["half_unit_mag"]), galaxy["name"]
+        rounding = float(galaxy["half_unit_mag"]) + pull(distance)[row]
+        assert abs(modulus - float(galaxy["modulus_mag"])) < rounding, galaxy["name"]
         # Common practice: mu = 5 log10(d/Mpc) + 25.
         mpc = float(galaxy["distance_pc"]) / 1e6
-        assert modulus == pytest.approx(5 * np.log10(mpc) + 25, abs=2e-6), galaxy["name"]
+        assert modulus == pytest.approx(5 * np.log10(mpc) + 25, abs=pull(distance)[row]), galaxy["name"]
 
 
-def test_seventeen_and_minus_four_point_two(made):
+def test_seventeen_and_minus_four_point_two(made, distance):
     """Common practice: m = 17 and M = -4.2 stand at mu = 21.2."""
-    assert column(made, "modulus_p50")[-1] == pytest.approx(21.2, abs=2e-6)
+    assert column(made, "modulus_p50")[-1] == pytest.approx(21.2, abs=pull(distance)[-1])
     assert column(made, "absmag_G_direct")[-1] == pytest.approx(-4.2, abs=1e-11)
 
 
@@ -222,11 +242,10 @@ def test_absolute_magnitudes(made, catalogue, distance, band):
     np.testing.assert_allclose(column(made, f"extinction_{band}"), extinction, rtol=1e-15)
     expected = magnitude - distance.distmod.value - extinction
     np.testing.assert_allclose(column(made, f"absmag_{band}_direct"), expected, rtol=0, atol=1e-11)
-    np.testing.assert_allclose(column(made, f"absmag_{band}_p50"), expected, rtol=0, atol=2e-6)
-    # Magnitude error and modulus width in quadrature; the first is a thousand times the second.
+    # Magnitude error and modulus width in quadrature.
     total = np.hypot(error, 5 / np.log(10) * RELATIVE)
-    np.testing.assert_allclose(column(made, f"absmag_{band}_p84") - expected, total, rtol=0, atol=2e-6)
-    np.testing.assert_allclose(expected - column(made, f"absmag_{band}_p16"), total, rtol=0, atol=2e-6)
+    for name, shift in (("p16", -total), ("p50", 0.0), ("p84", total)):
+        within(column(made, f"absmag_{band}_{name}"), expected + shift, pull(distance), name)
 
 
 @pytest.mark.parametrize(("colour", "blue", "red"), [("B_R", "B", "R"), ("G_R", "G", "R")])
