@@ -87,9 +87,11 @@ impl Error {
         std::iter::once(self).chain(self.others.iter())
     }
 
-    /// Adds the file, unless an inner layer named one.
+    /// Adds the file to this error and those that travel with it, unless an inner layer named one.
     pub fn in_file(mut self, file: impl AsRef<Path>) -> Self {
-        self.place.file.get_or_insert_with(|| file.as_ref().to_path_buf());
+        for error in self.others.iter_mut().map(|other| &mut other.place).chain([&mut self.place]) {
+            error.file.get_or_insert_with(|| file.as_ref().to_path_buf());
+        }
         self
     }
 

@@ -141,15 +141,22 @@ impl<'a> Walk<'a> {
 
     /// Options told apart by the TOML type of the value.
     fn any_of(&mut self, options: &'a [Value], value: &DeValue<'_>, path: &str, at: usize) {
-        let options: Vec<&'a Value> = options.iter().map(|o| self.resolve(o)).collect();
-        match options.iter().find(|o| kinds(o).iter().any(|kind| fits(kind, value))) {
+        match options.iter().find(|option| self.expected(option).iter().any(|kind| fits(kind, value))) {
             Some(option) => self.value(option, value, path, at),
             None => {
-                let names: Vec<&str> =
-                    options.iter().flat_map(|o| kinds(o)).filter(|k| *k != "null").map(name_of).collect();
+                let mut names: Vec<&str> = options.iter().flat_map(|o| self.expected(o)).map(name_of).collect();
+                names.retain(|name| *name != "null");
+                names.dedup();
                 self.fault(path, at, format!("{} is needed here, not {}", names.join(" or "), describe(value)));
             }
         }
+    }
+
+    /// TOML types that a schema takes, through its alternatives.
+    fn expected(&self, schema: &'a Value) -> Vec<&'a str> {
+        let schema = self.resolve(schema);
+        let alternatives = ["anyOf", "oneOf"].iter().filter_map(|key| schema.get(key)?.as_array()).flatten();
+        alternatives.flat_map(|option| self.expected(option)).chain(kinds(schema)).collect()
     }
 
     fn word(&mut self, words: &[&str], value: &DeValue<'_>, path: &str, at: usize) {

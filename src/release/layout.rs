@@ -365,7 +365,7 @@ fn refuse_lossy(input: &SchemaDescriptor, own: &Fields) -> Result<()> {
             errors.push(cannot(&name, "intervals would lose their months"));
         } else if old.physical_type() == Physical::INT96 {
             errors.push(cannot(&name, "INT96 timestamps have no writer"));
-        } else if !(same || decimal && integer) {
+        } else if !(same || decimal && (integer || usual_width(old))) {
             errors.push(cannot(
                 &name,
                 &format!("{} values would be stored as {}", old.physical_type(), new.physical_type()),
@@ -373,6 +373,15 @@ fn refuse_lossy(input: &SchemaDescriptor, own: &Fields) -> Result<()> {
         }
     }
     Error::all(errors).map_or(Ok(()), Err)
+}
+
+/// Is this a fixed-length decimal of the width that its precision needs, as the writer makes them?
+fn usual_width(column: &ColumnDescriptor) -> bool {
+    let least = (1..=16).find(|bytes| {
+        let digits = u32::try_from(column.type_precision()).unwrap_or(u32::MAX);
+        10u128.checked_pow(digits).is_some_and(|above| above - 1 < 1u128 << (8 * bytes - 1))
+    });
+    column.physical_type() == Physical::FIXED_LEN_BYTE_ARRAY && least == Some(column.type_length())
 }
 
 fn cannot(column: &str, why: &str) -> Error {
