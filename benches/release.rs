@@ -87,7 +87,8 @@ fn catalogue(folder: &Path, rows: usize) {
             .status()
             .expect("the program runs");
         assert!(status.success(), "the mock catalogue could not be made");
-        let plan = std::fs::read_to_string(Path::new(env!("CARGO_MANIFEST_DIR")).join("benches/reference.toml")).expect("reference.toml");
+        let plan = std::fs::read_to_string(Path::new(env!("CARGO_MANIFEST_DIR")).join("benches/reference.toml"))
+            .expect("reference.toml");
         std::fs::write(folder.join("reference.toml"), plan).expect("the plan can be written");
     }
 }
@@ -98,7 +99,10 @@ fn parquet_files(folder: &Path) -> Vec<PathBuf> {
             let path = entry.path();
             if path.is_dir() && !path.ends_with("release") {
                 walk(&path, found);
-            } else if path.extension().is_some_and(|e| e == "parquet") && !path.ends_with("floor.parquet") && !path.ends_with("polars.parquet") {
+            } else if path.extension().is_some_and(|e| e == "parquet")
+                && !path.ends_with("floor.parquet")
+                && !path.ends_with("polars.parquet")
+            {
                 found.push(path);
             }
         }
@@ -136,12 +140,15 @@ fn new_columns(input: &Path, parts: &[PathBuf]) -> Vec<RecordBatch> {
             let rows = metadata.metadata().row_group(group).num_rows() as usize;
             let all = metadata.schema().fields().len();
             let mask = ProjectionMask::roots(metadata.parquet_schema(), old..all);
-            let reader = ParquetRecordBatchReaderBuilder::new_with_metadata(file.try_clone().expect("a handle"), metadata.clone())
-                .with_row_groups(vec![group])
-                .with_projection(mask)
-                .with_batch_size(rows)
-                .build()
-                .expect("a part can be read");
+            let reader = ParquetRecordBatchReaderBuilder::new_with_metadata(
+                file.try_clone().expect("a handle"),
+                metadata.clone(),
+            )
+            .with_row_groups(vec![group])
+            .with_projection(mask)
+            .with_batch_size(rows)
+            .build()
+            .expect("a part can be read");
             groups.extend(reader.map(|batch| batch.expect("a part can be decoded")));
         }
     }
@@ -169,7 +176,8 @@ fn floor(input: &Path, ready: &[RecordBatch], output: &Path, threads: usize) -> 
         }
     }
     let properties = Arc::new(builder.build());
-    let shape = SerializedFileWriter::new(std::io::sink(), new.root_schema_ptr(), properties.clone()).expect("a writer");
+    let shape =
+        SerializedFileWriter::new(std::io::sink(), new.root_schema_ptr(), properties.clone()).expect("a writer");
     let factory = ArrowRowGroupWriterFactory::new(&shape, schema.clone());
     let file = BufWriter::with_capacity(1 << 20, File::create(output).expect("the output opens"));
     let writer = SerializedFileWriter::new(file, root, properties).expect("a writer");

@@ -22,7 +22,9 @@ pub(super) fn stages(survey: &Survey) -> Vec<Box<dyn Stage>> {
                 format!("absmag_{band}_direct"),
                 "mag",
                 &format!("phys.magAbs;{}", spectral_word(band)),
-                format!("Absolute magnitude in band {band} from the inverted parallax; biased at low parallax_over_error"),
+                format!(
+                    "Absolute magnitude in band {band} from the inverted parallax; biased at low parallax_over_error"
+                ),
                 format!("{band} + 5 log10(parallax_calibrated) - 10 - extinction_{band}"),
             ),
             reads: vec![0, inputs.len() - 2, inputs.len() - 1],

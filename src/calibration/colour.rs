@@ -113,8 +113,7 @@ fn of_bands(survey: &Survey, name: &str, blue: &str, red: &str) -> Box<dyn Stage
     } else {
         "missing: the plan names no magnitude error for one of the bands".to_owned()
     };
-    let methods =
-        [format!("{blue} - {red}"), error_method, format!("({blue} - A_{blue}) - ({red} - A_{red})")];
+    let methods = [format!("{blue} - {red}"), error_method, format!("({blue} - A_{blue}) - ({red} - A_{red})")];
     let mut words = format!("{};{}", spectral_word(blue), spectral_word(red));
     if spectral_word(blue) == spectral_word(red) {
         words = spectral_word(blue).to_owned();
@@ -150,8 +149,7 @@ fn of_bands(survey: &Survey, name: &str, blue: &str, red: &str) -> Box<dyn Stage
 }
 
 fn of_column(survey: &Survey, name: &str, colour: &ColourColumn) -> Box<dyn Stage> {
-    let mut inputs =
-        vec![Input::catalogue(&colour.column, "mag", Domain::Any, format!("colours.{name}.column"))];
+    let mut inputs = vec![Input::catalogue(&colour.column, "mag", Domain::Any, format!("colours.{name}.column"))];
     let error_at = colour.error.as_ref().map(|error| {
         inputs.push(Input::catalogue(error, "mag", Domain::NotNegative, format!("colours.{name}.error")));
         inputs.len() - 1

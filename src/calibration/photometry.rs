@@ -101,12 +101,11 @@ impl Band {
         if self.magnitude_error.is_some() && self.magnitude.is_none() {
             faults.push(at(".magnitude_error", "belongs to `magnitude`; a band given by `flux` takes `flux_error`"));
         }
-        let stray = [
-            (".flux_error", self.flux_error.is_some()),
-            (".zero_point", self.zero_point.is_some()),
-        ];
+        let stray = [(".flux_error", self.flux_error.is_some()), (".zero_point", self.zero_point.is_some())];
         if self.magnitude.is_some() && self.flux.is_none() {
-            faults.extend(stray.into_iter().filter(|s| s.1).map(|(key, _)| at(key, "is used only with `flux`; remove it")));
+            faults.extend(
+                stray.into_iter().filter(|s| s.1).map(|(key, _)| at(key, "is used only with `flux`; remove it")),
+            );
         }
         faults
     }
@@ -143,8 +142,7 @@ fn flux_stage(name: &str, band: &Band) -> Option<Box<dyn Stage>> {
         None => "",
     };
     let settings = format!("zero point {zero_point:?}{system}");
-    let mut inputs =
-        vec![Input::catalogue(&column, Band::FLUX_UNIT, Domain::Any, format!("bands.{name}.flux"))];
+    let mut inputs = vec![Input::catalogue(&column, Band::FLUX_UNIT, Domain::Any, format!("bands.{name}.flux"))];
     let mut outputs = vec![Output {
         declared: Declared::float(
             format!("magnitude_{name}"),

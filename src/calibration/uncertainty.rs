@@ -46,12 +46,7 @@ pub(super) fn stages(survey: &Survey) -> Vec<Box<dyn Stage>> {
     vec![Box::new(Kernel {
         name: "uncertainty",
         revision: 1,
-        inputs: vec![Input::catalogue(
-            &survey.roles.parallax_error,
-            "mas",
-            Domain::Positive,
-            "columns.parallax_error",
-        )],
+        inputs: vec![Input::catalogue(&survey.roles.parallax_error, "mas", Domain::Positive, "columns.parallax_error")],
         outputs: vec![Output {
             declared: Declared::float(
                 "parallax_error_calibrated",

@@ -1,7 +1,7 @@
 //! `tenparsec draft CATALOGUE`: looks at the columns of a catalogue and prints a starter plan.
 
-use crate::columnar::source;
 use crate::catalogue::Catalogue;
+use crate::columnar::source;
 use crate::engine::progress::{Voice, json_line};
 use crate::error::{Error, Result};
 use crate::plan::draft::{self, ColumnSeen};

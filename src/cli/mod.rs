@@ -127,7 +127,11 @@ pub fn run(cli: Cli) -> Result<u8> {
 pub fn report(error: &Error, voice: Voice) {
     if voice == Voice::Json {
         for one in error.each() {
-            json_line("error", "error", &[("text", one.message.clone().into()), ("place", one.place.to_string().into())]);
+            json_line(
+                "error",
+                "error",
+                &[("text", one.message.clone().into()), ("place", one.place.to_string().into())],
+            );
         }
         return;
     }

@@ -92,8 +92,9 @@ pub fn run(plan: Plan, request: &Request) -> Result<Summary> {
 
     let mut done = BTreeMap::new();
     for entry in finished {
-        let tally: Tally = serde_json::from_value(entry.details)
-            .map_err(|e| Error::failed(format!("A line of the ledger cannot be read ({e}); start afresh with --overwrite.")))?;
+        let tally: Tally = serde_json::from_value(entry.details).map_err(|e| {
+            Error::failed(format!("A line of the ledger cannot be read ({e}); start afresh with --overwrite."))
+        })?;
         done.insert(entry.index as usize, (entry.part, tally));
     }
     let continued = done.len();

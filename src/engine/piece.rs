@@ -140,9 +140,11 @@ fn may_have_nulls(source: &SourceFile, row_group: usize, column: &str) -> bool {
 fn refuse_null_id(batch: &RecordBatch, id: &str, first_row: u64) -> Result<()> {
     let column = batch.column_by_name(id).expect("the reader was asked for the id");
     match (0..column.len()).find(|row| column.is_null(*row)) {
-        Some(row) => Err(Error::failed("The id is null; every star needs one. Repair the catalogue or choose another `columns.id`.")
-            .in_column(id)
-            .at_row(first_row + row as u64)),
+        Some(row) => Err(Error::failed(
+            "The id is null; every star needs one. Repair the catalogue or choose another `columns.id`.",
+        )
+        .in_column(id)
+        .at_row(first_row + row as u64)),
         None => Ok(()),
     }
 }

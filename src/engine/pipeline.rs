@@ -149,4 +149,3 @@ impl std::fmt::Debug for Pipeline {
         f.debug_struct("Pipeline").field("loads", &self.loads).field("outputs", &self.outputs.len()).finish()
     }
 }
-

@@ -51,7 +51,8 @@ pub fn all() -> Vec<(&'static str, String)> {
 
 /// The dictionary of computed columns; B and F stand for a band by magnitude and by flux, C for a colour.
 fn columns() -> Value {
-    let plan = Plan::parse(Path::new("every-column.toml"), EVERY_COLUMN.to_owned()).expect("the plan above has no faults");
+    let plan =
+        Plan::parse(Path::new("every-column.toml"), EVERY_COLUMN.to_owned()).expect("the plan above has no faults");
     let mut list: Vec<Value> = stages(&plan.survey)
         .iter()
         .flat_map(|stage| stage.outputs().iter())

@@ -47,7 +47,8 @@ impl Summary {
         );
         let cuts = &total.cuts;
         if !job.cuts.is_empty() {
-            let text = format!("{} rows pass every cut ({})", show_count(cuts.accepted), share(cuts.accepted, cuts.read));
+            let text =
+                format!("{} rows pass every cut ({})", show_count(cuts.accepted), share(cuts.accepted, cuts.read));
             line("accepted", text);
         }
         for (settings, count) in job.plan.document.cuts.iter().zip(&cuts.cuts) {

@@ -14,7 +14,9 @@ pub const CONTENT: &str = "IVOA.VOTable-Parquet.content";
 /// The header of a table with these columns.
 pub fn header(title: &str, schema: &Schema) -> String {
     let mut xml = String::from("<?xml version=\"1.0\" encoding=\"UTF-8\"?>\n");
-    xml.push_str("<VOTABLE version=\"1.4\" xmlns=\"http://www.ivoa.net/xml/VOTable/v1.3\">\n<RESOURCE type=\"results\">\n");
+    xml.push_str(
+        "<VOTABLE version=\"1.4\" xmlns=\"http://www.ivoa.net/xml/VOTable/v1.3\">\n<RESOURCE type=\"results\">\n",
+    );
     let _ = writeln!(xml, "<TABLE name=\"{}\">", escape(title));
     for field in schema.fields() {
         let _ = writeln!(xml, "{}", field_element(field));

@@ -84,7 +84,8 @@ fn imports_run_one_way() {
                 if to == from || to == "error" || to == "Error" || to == "Result" {
                     continue;
                 }
-                let height = heights.get(to.as_str()).unwrap_or_else(|| panic!("{}: unknown module {to}", path.display()));
+                let height =
+                    heights.get(to.as_str()).unwrap_or_else(|| panic!("{}: unknown module {to}", path.display()));
                 if height >= own {
                     upward.push(format!("{}:{}: {from} uses {to}", path.display(), number + 1));
                 }
@@ -96,7 +97,19 @@ fn imports_run_one_way() {
 
 #[test]
 fn pure_folders_know_no_files_and_no_arrow() {
-    let outside = ["std::fs", "std::io", "std::net", "std::process", "std::env", "std::time", "arrow::", "parquet::", "polars", "println!", "eprintln!"];
+    let outside = [
+        "std::fs",
+        "std::io",
+        "std::net",
+        "std::process",
+        "std::env",
+        "std::time",
+        "arrow::",
+        "parquet::",
+        "polars",
+        "println!",
+        "eprintln!",
+    ];
     for (path, text) in sources() {
         if PURE.contains(&folder_of(&path).as_str()) {
             for (number, line) in text.lines().enumerate() {

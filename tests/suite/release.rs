@@ -52,12 +52,17 @@ fn values_follow_their_formulas() {
         near("absmag_R_p50", row, r - 0.6 * a - median);
         near("absmag_R_p16", row, r - 0.6 * a - column("modulus_p84")[row].unwrap());
         assert!(g_error[row].unwrap() > 0.0);
-        let (narrow, wide) = (column("modulus_p84")[row].unwrap() - column("modulus_p16")[row].unwrap(),
-            column("absmag_G_p84")[row].unwrap() - column("absmag_G_p16")[row].unwrap());
+        let (narrow, wide) = (
+            column("modulus_p84")[row].unwrap() - column("modulus_p16")[row].unwrap(),
+            column("absmag_G_p84")[row].unwrap() - column("absmag_G_p16")[row].unwrap(),
+        );
         assert!(wide >= narrow, "photometric error cannot sharpen: {wide} {narrow}");
         let accepted = rows.column_by_name("accepted").unwrap().as_boolean().value(row);
         assert_eq!(accepted, p / calibrated > 5.0);
-        assert_eq!(rows.column_by_name("verdict").unwrap().as_primitive::<UInt32Type>().value(row), u32::from(!accepted));
+        assert_eq!(
+            rows.column_by_name("verdict").unwrap().as_primitive::<UInt32Type>().value(row),
+            u32::from(!accepted)
+        );
     }
 }
 
@@ -90,12 +95,16 @@ fn lineage_changes_with_what_a_column_depends_on_and_with_nothing_else() {
         world.plan(plan);
         let rows = rows_of(&world.release());
         let of = |name: &str| rows.schema().field_with_name(name).unwrap().metadata()["lineage"].clone();
-        ["zero_point", "extinction_G", "colour_G_R_intrinsic", "modulus_p50", "absmag_G_p50", "absmag_R_p50", "verdict"].map(of)
+        ["zero_point", "extinction_G", "colour_G_R_intrinsic", "modulus_p50", "absmag_G_p50", "absmag_R_p50", "verdict"]
+            .map(of)
     };
     let base = lineage(PLAN);
     assert_eq!(base, lineage(&PLAN.replace("title = \"test\"", "title = \"another\"")));
     let ratio = lineage(&PLAN.replace("0.84", "0.85"));
-    assert_eq!([ratio[0].as_str(), &ratio[1], &ratio[3], &ratio[5]].map(|x| base.iter().any(|b| b == x)), [true, false, true, true]);
+    assert_eq!(
+        [ratio[0].as_str(), &ratio[1], &ratio[3], &ratio[5]].map(|x| base.iter().any(|b| b == x)),
+        [true, false, true, true]
+    );
     assert_ne!(ratio[2], base[2]);
     assert_ne!(ratio[4], base[4]);
     let zero = lineage(&PLAN.replace("-0.02", "-0.03"));
@@ -153,7 +162,11 @@ fn dropped_rows_are_gone_counted_and_the_rest_unchanged() {
         all.column_by_name("fit").unwrap().as_primitive::<Float32Type>().iter().map(|x| x.map(|x| x < 1.2)).collect();
     let expected = arrow::compute::filter_record_batch(&all, &keep).unwrap();
     for name in ["id", "field", "parallax", "modulus_p50", "absmag_G_p84", "prior_share"] {
-        assert_eq!(rows.column_by_name(name).unwrap().as_ref(), expected.column_by_name(name).unwrap().as_ref(), "{name}");
+        assert_eq!(
+            rows.column_by_name(name).unwrap().as_ref(),
+            expected.column_by_name(name).unwrap().as_ref(),
+            "{name}"
+        );
     }
 }
 
@@ -248,7 +261,8 @@ fn an_unfinished_release_of_another_plan_is_not_mixed() {
 fn statistics_spare_decoding_but_never_change_a_count() {
     // ids rise, so footers decide `id < N` for most row groups; the same rows in another order are decided by decoding
     let ordered = World::with_stars(&stars(3000));
-    let plan = PLAN.replace("[distance]", "[[cuts]]\nname = \"early\"\nkeep = \"id < 9000\"\neffect = \"drop\"\n[distance]");
+    let plan =
+        PLAN.replace("[distance]", "[[cuts]]\nname = \"early\"\nkeep = \"id < 9000\"\neffect = \"drop\"\n[distance]");
     ordered.plan(&plan);
     ordered.release();
     let shuffled = World::new();

@@ -153,8 +153,24 @@ fn impossible_values_are_missing_counted_and_said() {
         let old = old.as_any().downcast_ref::<Float64Array>().unwrap();
         Arc::new((0..1000).map(|i| Some(change(i, old.value(i)))).collect::<Float64Array>()) as ArrayRef
     };
-    let parallax = strange("parallax", &|i, x| if i < 3 { f64::NAN } else if i < 5 { f64::INFINITY } else { x });
-    let error = strange("parallax_error", &|i, x| if i == 10 { -x } else if i == 11 { 0.0 } else { x });
+    let parallax = strange("parallax", &|i, x| {
+        if i < 3 {
+            f64::NAN
+        } else if i < 5 {
+            f64::INFINITY
+        } else {
+            x
+        }
+    });
+    let error = strange("parallax_error", &|i, x| {
+        if i == 10 {
+            -x
+        } else if i == 11 {
+            0.0
+        } else {
+            x
+        }
+    });
     let dec = strange("dec", &|i, x| if i == 20 { 123.0 } else { x });
     let mut changed = with(&batch, "parallax", parallax);
     changed = with(&changed, "parallax_error", error);
@@ -163,7 +179,11 @@ fn impossible_values_are_missing_counted_and_said() {
     world.plan(&PLAN.replace("[bands.G]", "ra = \"ra\"\ndec = \"dec\"\n[bands.G]"));
     let said = world.build();
     assert_eq!(said.code, 0, "{}", said.err);
-    for words in ["5 values of `parallax` NaN or infinite", "2 values of `parallax_error` zero or negative", "`dec` leaves the range"] {
+    for words in [
+        "5 values of `parallax` NaN or infinite",
+        "2 values of `parallax_error` zero or negative",
+        "`dec` leaves the range",
+    ] {
         assert!(said.out.contains(words), "{words}: {}", said.out);
     }
     let rows = crate::world::rows_of(&world.path("release"));
