@@ -162,7 +162,7 @@ pub fn array(series: &pl::Series) -> Result<ArrayRef> {
 /// A polars frame as an Arrow batch; every field may be null.
 ///
 /// # Errors
-/// As [`array`].
+/// As [`array()`].
 pub fn batch(frame: &pl::DataFrame) -> Result<RecordBatch> {
     let arrays =
         frame.columns().iter().map(|c| array(c.as_materialized_series())).collect::<Result<Vec<ArrayRef>>>()?;

@@ -1,8 +1,8 @@
 //! A mock catalogue: the invented survey "Lantern Ridge 2", of any size, with the truth beside the measurements.
 //!
-//! The sky has two discs and a halo ([`galaxy`]), main sequence, giants and white dwarfs ([`stars`]), of which the survey
-//! sees those within its limits of magnitude ([`lattice`]) and measures them with faults that a plan can mend and some
-//! that it cannot ([`survey`]). Every row is a function of the seed and the row number, so the same seed gives the same
+//! The sky has two discs and a halo (`galaxy`), main sequence, giants and white dwarfs (`stars`), of which the survey
+//! sees those within its limits of magnitude (`lattice`) and measures them with faults that a plan can mend and some
+//! that it cannot (`survey`). Every row is a function of the seed and the row number, so the same seed gives the same
 //! bytes for any number of threads, and the same stars for any number of files or size of row groups.
 
 mod columns;

@@ -18,7 +18,7 @@ const LIMB_MASK: i64 = 0xffff_ffff;
 /// Each addition moves a limb by less than 2^32, so 2^30 of them stay far within an `i64`.
 const CARRY_AFTER: u32 = 1 << 30;
 
-/// Exact sum of doubles, or of their squares; sum_i limbs[i] 2^(32 (base + i)).
+/// Exact sum of doubles, or of their squares; sum over i of `limbs[i]` 2^(32 (base + i)).
 #[derive(Debug, Clone, Default)]
 pub struct ExactSum {
     base: i32,

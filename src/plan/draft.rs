@@ -1,6 +1,6 @@
 //! A plan proposed from the columns of a catalogue: what a user starts from, not what they end with.
 //!
-//! Roles are read off UCDs (UCD1+ 1.6) and units (VOUnits) where there are any, else off names ([`guess`]). What stays open
+//! Roles are read off UCDs (UCD1+ 1.6) and units (VOUnits) where there are any, else off names (`guess`). What stays open
 //! is a commented line that says what is missing, and a sentence in [`Draft::could_not_guess`]. Choices that no column can
 //! settle (zero point, prior, limits of cuts) are written out as choices.
 
