@@ -148,7 +148,7 @@ impl Writer {
         if let Some((ratio, word)) = band.extinction {
             self.line(format!(
                 "{mark}extinction_ratio = {ratio:?}   # A_{} / A_V: mean of band {word}, R_V = 3.1 (Cardelli, Clayton & \
-                 Mathis 1989, ApJ 345, 245)",
+                 Mathis 1989, ApJ 345, 245; from memory, check it)",
                 band.name
             ));
         } else {
