@@ -3,12 +3,10 @@
 //! Rows are laid side by side in lanes only with rows of the same class, so that the number of nodes a row gets is a matter
 //! of that row alone; results go back to the row's place.
 
-use std::ops::Range;
-
 use pulp::{Simd, WithSimd};
 
 use super::integrate::{Nodes, Summary, integrate};
-use super::locate::{self, PLAIN, Rule, Stars, WIDE, locate};
+use super::locate::{self, Constants, PLAIN, Rule, Stars, WIDE, locate};
 use super::shape::Shape;
 use super::{BAND_OUTPUTS, MAGNITUDES_PER_LN, MODULUS_OUTPUTS, Photometry, Workspace, bands, convolve, mode};
 use crate::numerics::lanes::Lanes;
@@ -17,6 +15,28 @@ use crate::numerics::lanes::Lanes;
 pub(super) const CHUNK: usize = 512;
 /// Numbers of nodes; a row takes the smallest that suffices.
 const CLASSES: [usize; 18] = [16, 18, 20, 22, 24, 28, 32, 40, 48, 64, 96, 128, 192, 256, 384, 512, 1024, 2048];
+/// Classes up to this number of nodes try the expansion about a normal distribution.
+const SHORTEST: usize = 28;
+/// Class by the number of nodes needed.
+const CLASS_OF: [u8; 2049] = {
+    let mut table = [0; 2049];
+    let mut c = 0;
+    let mut n = 0;
+    while n < table.len() {
+        if n > CLASSES[c] {
+            c += 1;
+        }
+        table[n] = c as u8;
+        n += 1;
+    }
+    table
+};
+
+/// The smallest class with at least so many nodes; the largest one if none has, or for NaN.
+fn class_of(needed: f64) -> u8 {
+    if needed <= 2048.0 { CLASS_OF[needed.max(0.0).ceil() as usize] } else { (CLASSES.len() - 1) as u8 }
+}
+
 /// Widest lanes.
 pub(super) const WIDEST: usize = 8;
 
@@ -38,19 +58,16 @@ enum Column {
     Mean,
     Variance,
     Restless,
-    Edge,
-    /// 3 levels times 4 terms
-    Heat,
-    Cumulants = Column::Heat as usize + 12,
-    BandSd = Column::Cumulants as usize + 7,
-    /// 3 levels
-    Band,
-    Count = Column::Band as usize + 3,
+    /// Number of these; four columns a band follow: three convolved quantiles and the photometric error.
+    Count,
 }
 
 /// One chunk.
 pub(super) struct Task<'a, 'b, 'c> {
     pub shape: &'a Shape,
+    /// For [`PLAIN`] and [`WIDE`] care.
+    pub plain: &'a Constants,
+    pub wide: &'a Constants,
     pub variance: f64,
     pub start: usize,
     pub end: usize,
@@ -70,13 +87,12 @@ impl WithSimd for Task<'_, '_, '_> {
             // 32-bit words of a lane cannot be addressed there
             return self.with_simd(pulp::Scalar256b);
         }
-        match (self.shape.decline.is_some(), self.shape.high.is_finite(), self.bands.is_empty()) {
-            (true, false, true) => self.run::<S, true, false, false>(simd),
-            (true, false, false) => self.run::<S, true, false, true>(simd),
-            (true, true, true) => self.run::<S, true, true, false>(simd),
-            (true, true, false) => self.run::<S, true, true, true>(simd),
-            (false, _, true) => self.run::<S, false, true, false>(simd),
-            (false, _, false) => self.run::<S, false, true, true>(simd),
+        // a shape has a decline or an end; one with both would need two more variants here
+        match (self.shape.decline.is_some(), self.bands.is_empty()) {
+            (true, true) => self.run::<S, true, false, false>(simd),
+            (true, false) => self.run::<S, true, false, true>(simd),
+            (false, true) => self.run::<S, false, true, false>(simd),
+            (false, false) => self.run::<S, false, true, true>(simd),
         }
     }
 }
@@ -92,8 +108,8 @@ impl Task<'_, '_, '_> {
         let rows = self.end - self.start;
         let padded = rows.next_multiple_of(WIDEST);
         let width = S::F64_LANES;
-        let Workspace { columns, order, class, nodes, .. } = self.scratch;
-        columns.resize(CHUNK * Column::Count as usize, 0.0);
+        let Workspace { columns, order, class, nodes, slow, .. } = self.scratch;
+        columns.resize(CHUNK * (Column::Count as usize + 4 * self.bands.len()), 0.0);
         let mut columns: Vec<&mut [f64]> = columns.chunks_exact_mut(CHUNK).collect();
         for i in 0..padded {
             let row = self.start + i.min(rows - 1);
@@ -105,7 +121,7 @@ impl Task<'_, '_, '_> {
             columns[Column::Signal as usize][i] = (w / s).max(-1e9);
             columns[Column::LnError as usize][i] = s;
         }
-        let plain = Rule::new(simd, self.shape, PLAIN.depth);
+        let plain = Rule::new(simd, self.plain);
         for i in (0..padded).step_by(width) {
             let at = i..i + width;
             let ln_error = Lanes::load(simd, &columns[Column::LnError as usize][at.clone()]).ln();
@@ -121,7 +137,7 @@ impl Task<'_, '_, '_> {
         }
         order.clear();
         order.extend((0..rows as u32).filter(|&i| columns[Column::Doubtful as usize][i as usize] > 0.0));
-        let wide = Rule::new(simd, self.shape, WIDE.depth);
+        let wide = Rule::new(simd, self.wide);
         for group in order.chunks(width) {
             let stars = Stars {
                 signal: gather(simd, columns[Column::Signal as usize], group),
@@ -143,9 +159,8 @@ impl Task<'_, '_, '_> {
         let mut sizes = [0usize; CLASSES.len()];
         for i in 0..rows {
             let needed = columns[Column::Nodes as usize][i];
-            let c = CLASSES.iter().position(|&n| n as f64 >= needed).unwrap_or(CLASSES.len() - 1);
-            class[i] = c as u8;
-            sizes[c] += 1;
+            class[i] = class_of(needed);
+            sizes[class[i] as usize] += 1;
         }
         let mut starts = [0usize; CLASSES.len()];
         for c in 1..CLASSES.len() {
@@ -159,38 +174,56 @@ impl Task<'_, '_, '_> {
             next[c] += 1;
         }
         nodes.resize(CLASSES[CLASSES.len() - 1] * WIDEST * 3, 0.0);
+        slow.clear();
         for c in 0..CLASSES.len() {
             let count = CLASSES[c];
             for group in order[starts[c]..next[c]].chunks(width) {
-                let [low, high, top] = [Column::Low, Column::High, Column::Top]
-                    .map(|column| gather(simd, columns[column as usize], group));
-                let stars = Stars {
-                    signal: gather(simd, columns[Column::Signal as usize], group),
-                    ln_error: gather(simd, columns[Column::LnError as usize], group),
-                };
+                let [low, high, top, signal, ln_error] = gather_all(
+                    simd,
+                    [Column::Low, Column::High, Column::Top, Column::Signal, Column::LnError],
+                    &columns,
+                    group,
+                );
+                let stars = Stars { signal, ln_error };
                 let (sum, rest) = S::as_mut_simd_f64s(nodes).0.split_at_mut(count);
                 let (u, rest) = rest.split_at_mut(count);
                 let buffers = Nodes { sum, u, t: &mut rest[..count] };
-                let Summary { quantiles, mode, mean, variance, restless, edge, heat, cumulants } =
-                    integrate::<S, DECLINE, LIMIT, BANDS>(&stars, &plain, low, high, top, buffers);
-                for (column, lanes) in [
-                    (Column::P16, quantiles[0]),
-                    (Column::P50, quantiles[1]),
-                    (Column::P84, quantiles[2]),
-                    (Column::Mode, mode),
-                    (Column::Mean, mean),
-                    (Column::Variance, variance),
-                    (Column::Restless, restless),
-                ] {
-                    scatter(lanes, columns[column as usize], group);
+                let summary = if count <= SHORTEST {
+                    integrate::<S, DECLINE, LIMIT, BANDS, true>(&stars, &plain, low, high, top, buffers)
+                } else {
+                    integrate::<S, DECLINE, LIMIT, BANDS, false>(&stars, &plain, low, high, top, buffers)
+                };
+                scatter(summary.quantiles[0], columns[Column::P16 as usize], group);
+                scatter(summary.quantiles[1], columns[Column::P50 as usize], group);
+                scatter(summary.quantiles[2], columns[Column::P84 as usize], group);
+                scatter(summary.mode, columns[Column::Mode as usize], group);
+                scatter(summary.mean, columns[Column::Mean as usize], group);
+                scatter(summary.variance, columns[Column::Variance as usize], group);
+                scatter(summary.restless, columns[Column::Restless as usize], group);
+                if !BANDS {
+                    continue;
                 }
-                if BANDS {
-                    scatter(edge, columns[Column::Edge as usize], group);
-                    for (k, lanes) in heat.into_iter().flatten().enumerate() {
-                        scatter(lanes, columns[Column::Heat as usize + k], group);
+                for (index, band) in self.bands.iter().enumerate() {
+                    let mut sd = [0.0; WIDEST];
+                    for lane in 0..width {
+                        let error = band.error[self.start + group[lane.min(group.len() - 1)] as usize];
+                        sd[lane] = if known_error(error) { error / MAGNITUDES_PER_LN } else { 0.0 };
                     }
-                    for (k, lanes) in cumulants.into_iter().enumerate() {
-                        scatter(lanes, columns[Column::Cumulants as usize + k], group);
+                    let sd = Lanes::load(simd, &sd[..width]);
+                    let (values, failed) = if count <= SHORTEST {
+                        quick_bands::<S, true>(&summary, sd)
+                    } else {
+                        quick_bands::<S, false>(&summary, sd)
+                    };
+                    let place = Column::Count as usize + 4 * index;
+                    scatter(values[0], columns[place], group);
+                    scatter(values[1], columns[place + 1], group);
+                    scatter(values[2], columns[place + 2], group);
+                    if failed.any_positive() {
+                        scatter(sd, columns[place + 3], group);
+                        let mut flags = [0.0; WIDEST];
+                        failed.store(&mut flags[..width]);
+                        slow.extend(group.iter().zip(flags).filter(|x| x.1 > 0.0).map(|x| (index as u32, *x.0)));
                     }
                 }
             }
@@ -224,26 +257,16 @@ impl Task<'_, '_, '_> {
             return;
         }
         for (index, band) in self.bands.iter().enumerate() {
+            let place = Column::Count as usize + 4 * index;
             order.clear();
-            for i in (0..padded).step_by(width) {
-                let mut sd = [0.0; WIDEST];
-                for lane in 0..width {
-                    let error = band.error[self.start + (i + lane).min(rows - 1)];
-                    sd[lane] = if known_error(error) { error / MAGNITUDES_PER_LN } else { 0.0 };
-                }
-                let sd = Lanes::load(simd, &sd[..width]);
-                let slow = quick_bands(simd, sd, &mut columns, i..i + width);
-                let mut slow_rows = [0.0; WIDEST];
-                slow.store(&mut slow_rows[..width]);
-                order.extend((i..rows.min(i + width)).filter(|&k| slow_rows[k - i] > 0.0).map(|k| k as u32));
-            }
+            order.extend(slow.iter().filter(|x| x.0 == index as u32).map(|x| x.1));
             // nodes must resolve the photometric error too; rows of a class side by side
             for &i in order.iter() {
                 let i = i as usize;
                 let range = columns[Column::High as usize][i] - columns[Column::Low as usize][i];
-                let sd = columns[Column::BandSd as usize][i];
+                let sd = columns[place + 3][i];
                 let needed = columns[Column::Nodes as usize][i].max(range / (0.8 * sd) + 2.0);
-                class[i] = CLASSES.iter().position(|&n| n as f64 >= needed).unwrap_or(CLASSES.len() - 1) as u8;
+                class[i] = class_of(needed);
             }
             order.sort_by_key(|&i| class[i as usize]);
             for same in order.chunk_by(|&a, &b| class[a as usize] == class[b as usize]) {
@@ -256,12 +279,12 @@ impl Task<'_, '_, '_> {
                     let (u, rest) = rest.split_at_mut(count);
                     let buffers = Nodes { sum, u, t: &mut rest[..count] };
                     let [low, high, top] = [Column::Low, Column::High, Column::Top].map(|c| column(c as usize));
-                    let sd = column(Column::BandSd as usize);
-                    let guess: [Lanes<S>; 3] = std::array::from_fn(|k| column(Column::Band as usize + k));
+                    let sd = column(place + 3);
+                    let guess: [Lanes<S>; 3] = std::array::from_fn(|k| column(place + k));
                     let task =
                         Thorough::<S, DECLINE, LIMIT> { stars, rule: plain, low, high, top, sd, guess, nodes: buffers };
                     for (k, lanes) in simd.vectorize(task).into_iter().enumerate() {
-                        scatter(lanes, columns[Column::Band as usize + k], group);
+                        scatter(lanes, columns[place + k], group);
                     }
                 }
             }
@@ -273,7 +296,7 @@ impl Task<'_, '_, '_> {
                     valid(self.parallax[row], self.error[row]) && apparent.is_finite() && known_error(band.error[row]);
                 for (level, column) in out.iter_mut().enumerate() {
                     // a large modulus is a bright absolute magnitude: levels swap
-                    let modulus = MAGNITUDES_PER_LN * columns[Column::Band as usize + 2 - level][i] + 10.0;
+                    let modulus = MAGNITUDES_PER_LN * columns[place + 2 - level][i] + 10.0;
                     column[row] = if known { apparent - modulus } else { f64::NAN };
                 }
             }
@@ -286,37 +309,43 @@ fn known_error(error: f64) -> bool {
     (0.0..=1e3).contains(&error)
 }
 
-/// Convolved quantiles by the fast routes into the `Band` columns; where neither holds, 1 is returned and a guess stored.
+/// Convolved quantiles by the fast routes, and 1 where neither holds and a guess is given instead.
+#[expect(clippy::needless_range_loop, reason = "one index walks several arrays")]
 #[inline(always)]
-fn quick_bands<S: Simd>(simd: S, sd: Lanes<S>, columns: &mut [&mut [f64]], at: Range<usize>) -> Lanes<S> {
+fn quick_bands<S: Simd, const SHORT: bool>(summary: &Summary<S>, sd: Lanes<S>) -> ([Lanes<S>; 3], Lanes<S>) {
     let zero = sd.like(0.0);
     let one = sd.like(1.0);
-    let column = |k: usize| Lanes::load(simd, &columns[k][at.clone()]);
     let variance = sd * sd;
-    let edge = column(Column::Edge as usize);
-    let mut cumulants: [Lanes<S>; 7] = std::array::from_fn(|k| column(Column::Cumulants as usize + k));
-    let own_sd = cumulants[0].max(zero).sqrt();
-    cumulants[0] = cumulants[0] + variance;
-    let widened = cumulants[0].max(zero).sqrt() - own_sd;
-    let (expansion, expansion_good) = bands::cornish_fisher(column(Column::Mean as usize), &cumulants);
-    let expansion_good = zero.below(expansion_good).and(sd.like(1e8).below(edge));
-    let mut values = expansion;
+    let mut values = summary.quantiles;
+    let mut expansion_good = zero;
+    if SHORT {
+        let mut cumulants = summary.cumulants;
+        cumulants[0] = cumulants[0] + variance;
+        (values, expansion_good) = bands::cornish_fisher(summary.mean, &cumulants);
+        expansion_good = sd.like(1e8).below(summary.edge).select(expansion_good, zero);
+        let normal = zero.below(summary.normal).and(zero.below(expansion_good));
+        if !normal.select(zero, one).any_positive() {
+            return (values, zero);
+        }
+    }
+    let expanded = zero.below(expansion_good);
+    let normal = zero.below(summary.normal).and(expanded);
+    let own = summary.variance.max(zero);
+    let widened = (own + variance).sqrt() - own.sqrt();
     let mut slow = zero;
     for level in 0..3 {
-        let quantile = column(Column::P16 as usize + level);
-        let series: [Lanes<S>; 4] = std::array::from_fn(|k| column(Column::Heat as usize + 4 * level + k));
-        let (by_heat, heat_good) = bands::heat(quantile, &series, variance);
-        let clear = (quantile + sd * 6.5).below(edge);
-        let heat_good = zero.below(heat_good).and(clear).or(sd.at_most(zero));
+        let quantile = summary.quantiles[level];
+        let (by_heat, heat_good) = bands::heat(quantile, &summary.heat[level], variance);
+        // an end of the prior five standard deviations away shifts the quantile by less than 1e-7 of them
+        let clear = (quantile + sd * 5.0).below(summary.edge);
+        let heated = zero.below(heat_good).and(clear).or(sd.at_most(zero));
         let guess = quantile + widened * (level as f64 - 1.0);
-        values[level] = heat_good.select(by_heat, expansion_good.select(expansion[level], guess));
-        slow = heat_good.or(expansion_good).select(slow, one);
+        // where the posterior itself is near normal, the expansion always comes first, whatever its neighbours are
+        let value = heated.select(by_heat, expanded.select(values[level], guess));
+        values[level] = normal.select(values[level], value);
+        slow = normal.or(heated).or(expanded).select(slow, one);
     }
-    sd.store(&mut columns[Column::BandSd as usize][at.clone()]);
-    for (k, value) in values.into_iter().enumerate() {
-        value.store(&mut columns[Column::Band as usize + k][at.clone()]);
-    }
-    slow
+    (values, slow)
 }
 
 /// The convolution by quadrature; kept out of the main loop's code.
@@ -356,6 +385,29 @@ impl<S: Simd, const DECLINE: bool, const LIMIT: bool> WithSimd for Careful<S, DE
     }
 }
 
+/// The same for several columns; all are written to memory before the first is read back as a vector.
+#[inline(always)]
+fn gather_all<S: Simd, const K: usize>(
+    simd: S,
+    from: [Column; K],
+    columns: &[&mut [f64]],
+    rows: &[u32],
+) -> [Lanes<S>; K] {
+    let mut buffers = [[0.0; WIDEST]; K];
+    for (buffer, column) in buffers.iter_mut().zip(from) {
+        let column = &*columns[column as usize];
+        for lane in 0..S::F64_LANES {
+            buffer[lane] = column[rows[lane.min(rows.len() - 1)] as usize];
+        }
+    }
+    let mut out = [Lanes::splat(simd, 0.0); K];
+    for (lanes, buffer) in out.iter_mut().zip(&buffers) {
+        *lanes = Lanes::load(simd, &buffer[..S::F64_LANES]);
+    }
+    out
+}
+
+/// One column's values for a group of rows; missing lanes repeat the last row.
 #[inline(always)]
 fn gather<S: Simd>(simd: S, from: &[f64], rows: &[u32]) -> Lanes<S> {
     let mut buffer = [0.0; WIDEST];

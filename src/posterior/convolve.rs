@@ -160,7 +160,8 @@ pub(super) fn convolved<S: Simd, const DECLINE: bool, const LIMIT: bool>(
             let moved = (next - *y).abs();
             let running = zero.below(active);
             *y = running.select(next, *y);
-            active = running.and((zero + 1e-11).below(moved)).select(active, zero);
+            // Newton's error after a step is about its square over sd
+            active = running.and((zero + 1e-7).below(moved)).select(active, zero);
             if !active.any_positive() {
                 break;
             }

@@ -33,14 +33,18 @@ pub(super) struct Summary<S: Simd> {
     pub restless: Lanes<S>,
     /// The upper end where the prior cuts a significant density, far away elsewhere.
     pub edge: Lanes<S>,
-    /// Heat series of each quantile, in x (only with `BANDS`).
+    /// 1 where the Cornish-Fisher expansion holds (only with `SHORT`)
+    pub normal: Lanes<S>,
+    /// Heat series of each quantile, in x (only with `BANDS`, and not if `normal` in all lanes).
     pub heat: [[Lanes<S>; 4]; 3],
-    /// Cumulants 2 to 8 of x (only with `BANDS`).
+    /// Cumulants 2 to 8 of x (only with `SHORT`).
     pub cumulants: [Lanes<S>; 7],
 }
 
+/// Sums on the nodes. `SHORT`: few nodes, so the density may be close enough to normal for its cumulants to give the
+/// quantiles.
 #[inline(always)]
-pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const BANDS: bool>(
+pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const BANDS: bool, const SHORT: bool>(
     stars: &Stars<S>,
     rule: &Rule<S>,
     low: Lanes<S>,
@@ -84,7 +88,7 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const B
         sum = sum + weight;
         let mut arm = weight * (index - middle);
         sums[1] = sums[1] + arm;
-        for moment in &mut sums[2..if BANDS { 9 } else { 3 }] {
+        for moment in &mut sums[2..if SHORT { 9 } else { 3 }] {
             arm = arm * (index - middle);
             *moment = *moment + arm;
         }
@@ -119,43 +123,62 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const B
     let variance = (sums[2] / sum - shift * shift) * h * h;
     let mean = low + (shift + middle) * h;
 
-    let goals = LEVELS.map(|level| sum * level);
-    // first node whose cumulative sum reaches the goal: the nearest node to the quantile
-    let mut found = [simd_zero; 3];
     let simd = s.token();
-    for (j, reached) in nodes.sum[..count - 1].iter().enumerate() {
-        let reached = Lanes::of(simd, *reached);
-        let next = s.like((j + 1) as f64);
-        for (goal, node) in goals.iter().zip(found.iter_mut()) {
-            *node = reached.below(*goal).select(next, *node);
-        }
-    }
+    let far = s.like(1e9);
+    let edge = if LIMIT { s.like(1e-9).below(last).select(high, far) } else { far };
     let mut quantiles = [mean; 3];
     let mut heat = [[simd_zero; 4]; 3];
-    for level in 0..3 {
-        let node = found[level];
-        let before = simd_zero.below(node).select(pick(nodes.sum, (node - 1.0).max(simd_zero)), simd_zero);
-        let weight = (pick(nodes.sum, node) - before).max(s.like(1e-300));
-        let at = Point { u: pick(nodes.u, node), t: if DECLINE { pick(nodes.t, node) } else { simd_zero } };
-        let a = local::taylor(&scale.slopes::<DECLINE>(at));
-        let delta = local::invert(&a, (goals[level] - before) / weight - local::half_weight(&a));
-        quantiles[level] = low + (node + delta) * h;
+    let mut cumulants = [simd_zero; 7];
+    let mut normal = simd_zero;
+    if SHORT {
+        sums[0] = sum;
+        cumulants = bands::cumulants(&sums, h);
+        (quantiles, normal) = bands::cornish_fisher(mean, &cumulants);
         if LIMIT {
-            quantiles[level] = quantiles[level].min(high);
+            normal = s.like(1e8).below(edge).select(normal, simd_zero);
         }
-        if BANDS {
-            let offset = delta * h;
-            let u = at.u * (-offset).rough_exp();
-            let t = if DECLINE { at.t * (rule.alpha * offset).rough_exp() } else { simd_zero };
-            heat[level] = bands::heat_series(&local::taylor(&scale.slopes::<DECLINE>(Point { u, t })), h);
+    }
+    let is_normal = simd_zero.below(normal);
+    if !SHORT || is_normal.select(simd_zero, simd_zero + 1.0).any_positive() {
+        let goals = [sum * LEVELS[0], sum * LEVELS[1], sum * LEVELS[2]];
+        // first node whose cumulative sum reaches the goal: the nearest node to the quantile
+        let mut found = [simd_zero; 3];
+        for (j, reached) in nodes.sum[..count - 1].iter().enumerate() {
+            let reached = Lanes::of(simd, *reached);
+            let next = s.like((j + 1) as f64);
+            for (goal, node) in goals.iter().zip(found.iter_mut()) {
+                *node = reached.below(*goal).select(next, *node);
+            }
+        }
+        let [n0, n1, n2] = found;
+        let (m0, m1, m2) = (n0 - 1.0, n1 - 1.0, n2 - 1.0);
+        let (sum, u, t) = (&*nodes.sum, &*nodes.u, if DECLINE { &*nodes.t } else { &*nodes.u });
+        let picked =
+            pick([sum, sum, sum, sum, sum, sum, u, u, u, t, t, t], [m0, m1, m2, n0, n1, n2, n0, n1, n2, n0, n1, n2]);
+        for level in 0..3 {
+            let node = found[level];
+            let before = simd_zero.below(node).select(picked[level], simd_zero);
+            let weight = (picked[3 + level] - before).max(s.like(1e-300));
+            let at = Point { u: picked[6 + level], t: if DECLINE { picked[9 + level] } else { simd_zero } };
+            let a = local::taylor(&scale.slopes::<DECLINE>(at));
+            let delta = local::invert(&a, (goals[level] - before) / weight - local::half_weight(&a));
+            let mut quantile = low + (node + delta) * h;
+            if LIMIT {
+                quantile = quantile.min(high);
+            }
+            quantiles[level] = if SHORT { is_normal.select(quantiles[level], quantile) } else { quantile };
+            if BANDS {
+                let offset = delta * h;
+                let u = at.u * (-offset).rough_exp();
+                let t = if DECLINE { at.t * (rule.alpha * offset).rough_exp() } else { simd_zero };
+                heat[level] = bands::heat_series(&local::taylor(&scale.slopes::<DECLINE>(Point { u, t })), h);
+            }
         }
     }
 
     // mode of the density in distance: slope of log density in x less 1
-    let mut slopes = scale.slopes::<DECLINE>(Point {
-        u: pick(nodes.u, best_node),
-        t: if DECLINE { pick(nodes.t, best_node) } else { simd_zero },
-    });
+    let [u, t] = pick([&*nodes.u, if DECLINE { &*nodes.t } else { &*nodes.u }], [best_node, best_node]);
+    let mut slopes = scale.slopes::<DECLINE>(Point { u, t: if DECLINE { t } else { simd_zero } });
     slopes[0] = slopes[0] - h;
     let mut delta = simd_zero;
     let mut moved = simd_zero;
@@ -175,25 +198,28 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const B
     }
     let mode = low + (best_node + delta) * h;
     let restless = s.like(1e-8).below(moved * h).select(s.like(1.0), simd_zero);
-    let far = s.like(1e9);
-    let edge = if LIMIT { s.like(1e-9).below(last).select(high, far) } else { far };
-    let mut cumulants = [simd_zero; 7];
-    if BANDS {
-        sums[0] = sum;
-        cumulants = bands::cumulants(&sums, h);
-    }
-    Summary { quantiles, mode, mean, variance, restless, edge, heat, cumulants }
+    Summary { quantiles, mode, mean, variance, restless, edge, normal, heat, cumulants }
 }
 
-/// Element `index` of each lane.
+/// Elements `index[k]` of `from[k]`, lane by lane. All are written to memory before the first is read back as a vector:
+/// reading earlier would wait for the narrow writes each time.
 #[inline(always)]
-fn pick<S: Simd>(from: &[S::f64s], index: Lanes<S>) -> Lanes<S> {
-    let mut places = [0.0; WIDEST];
-    index.store(&mut places[..S::F64_LANES]);
-    let flat: &[f64] = pulp::bytemuck::cast_slice(from);
-    let mut values = [0.0; WIDEST];
-    for lane in 0..S::F64_LANES {
-        values[lane] = flat.get(places[lane] as usize * S::F64_LANES + lane).copied().unwrap_or(0.0);
+fn pick<S: Simd, const K: usize>(from: [&[S::f64s]; K], index: [Lanes<S>; K]) -> [Lanes<S>; K] {
+    let width = S::F64_LANES;
+    let mut places = [[0.0; WIDEST]; K];
+    let mut values = [[0.0; WIDEST]; K];
+    for k in 0..K {
+        index[k].store(&mut places[k][..width]);
     }
-    Lanes::load(index.token(), &values[..S::F64_LANES])
+    for k in 0..K {
+        let flat: &[f64] = pulp::bytemuck::cast_slice(from[k]);
+        for lane in 0..width {
+            values[k][lane] = flat.get(places[k][lane] as usize * width + lane).copied().unwrap_or(0.0);
+        }
+    }
+    let mut out = index;
+    for k in 0..K {
+        out[k] = Lanes::load(index[k].token(), &values[k][..width]);
+    }
+    out
 }

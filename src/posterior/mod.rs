@@ -26,6 +26,7 @@ pub mod prior;
 pub mod shape;
 
 use batch::{CHUNK, Task};
+use locate::{Constants, PLAIN, WIDE};
 pub use prior::Prior;
 
 /// 5 / ln 10: magnitudes of modulus for a unit of ln d.
@@ -53,6 +54,7 @@ pub struct Workspace {
     order: Vec<u32>,
     class: Vec<u8>,
     nodes: Vec<f64>,
+    slow: Vec<(u32, u32)>,
     narrow: bool,
 }
 
@@ -83,12 +85,26 @@ pub fn summarise(
     scratch: &mut Workspace,
 ) {
     let shape = prior.shape();
+    let plain = Constants::new(&shape, PLAIN.depth);
+    let wide = Constants::new(&shape, WIDE.depth);
     let variance = prior.modulus_variance();
     let rows = parallax.len();
     let mut start = 0;
     while start < rows {
         let end = rows.min(start + CHUNK);
-        let task = Task { shape: &shape, variance, start, end, parallax, error, bands, out, scratch };
+        let task = Task {
+            shape: &shape,
+            plain: &plain,
+            wide: &wide,
+            variance,
+            start,
+            end,
+            parallax,
+            error,
+            bands,
+            out,
+            scratch,
+        };
         if task.scratch.narrow {
             task.with_simd(pulp::Scalar256b);
         } else {

@@ -376,7 +376,7 @@ def gamma_cases(rng):
     for ratio in RATIOS:
         for product in [1e-4, 0.03, 0.3, 1, 30, 3e3]:
             length, error = scale_and_error(rng, product * math.exp(rng.uniform(-0.3, 0.3)))
-            alpha, beta = log_uniform(rng, 0.3, 4), rng.uniform(-0.5, 6)
+            alpha, beta = log_uniform(rng, 0.3, 4), rng.uniform(0, 6)
             signal = ratio * math.exp(rng.uniform(-0.1, 0.1))
             yield [alpha, beta, length], signal * error, error, None, photometric(rng, 2.17 / max(2.0, abs(signal)))
 

@@ -28,7 +28,6 @@ impl Describe for Settings {
         Shape {
             power: 3.0,
             decline: Some(Decline { alpha: 1.0, ln_length: libm::log(self.length_kpc) }),
-            low: f64::NEG_INFINITY,
             high: f64::INFINITY,
         }
     }

@@ -10,6 +10,7 @@ use serde::{Deserialize, Serialize};
 use super::shape::Shape;
 
 mod exponentially_decreasing_density;
+mod generalized_gamma;
 mod uniform_density;
 
 /// A setting that cannot be: its key under `[distance]` and the reason.
@@ -21,6 +22,15 @@ pub type Refusal = (&'static str, String);
 pub enum Prior {
     /// d^2 exp(-d/L): space density falling exponentially (Bailer-Jones 2015, PASP 127, 994).
     ExponentiallyDecreasingDensity {
+        /// L, kpc.
+        length_kpc: f64,
+    },
+    /// d^beta exp(-(d/L)^alpha): rise and fall of the space density set apart (Bailer-Jones et al. 2021, AJ 161, 147).
+    GeneralizedGamma {
+        /// Steepness of the decline.
+        alpha: f64,
+        /// Power of the distance before the decline.
+        beta: f64,
         /// L, kpc.
         length_kpc: f64,
     },
@@ -50,6 +60,9 @@ impl Prior {
         match *self {
             Self::ExponentiallyDecreasingDensity { length_kpc } => {
                 f(&exponentially_decreasing_density::Settings { length_kpc })
+            }
+            Self::GeneralizedGamma { alpha, beta, length_kpc } => {
+                f(&generalized_gamma::Settings { alpha, beta, length_kpc })
             }
             Self::UniformDensity { limit_kpc } => f(&uniform_density::Settings { limit_kpc }),
         }
@@ -111,5 +124,18 @@ mod tests {
             assert_eq!(Prior::UniformDensity { limit_kpc: bad }.check().unwrap_err().0, "limit_kpc");
         }
         assert!(Prior::UniformDensity { limit_kpc: 20.0 }.check().is_ok());
+        let gamma = |alpha, beta| Prior::GeneralizedGamma { alpha, beta, length_kpc: 1.0 }.check();
+        assert_eq!(gamma(f64::NAN, 2.0).unwrap_err().0, "alpha");
+        assert_eq!(gamma(1.0, -0.5).unwrap_err().0, "beta");
+        assert!(gamma(1.0, 2.0).is_ok());
+    }
+
+    /// alpha = 1, beta = 2 is the exponentially decreasing density.
+    #[test]
+    fn priors_meet_where_they_should() {
+        let gamma = Prior::GeneralizedGamma { alpha: 1.0, beta: 2.0, length_kpc: 1.35 };
+        let exponential = Prior::ExponentiallyDecreasingDensity { length_kpc: 1.35 };
+        assert_eq!(gamma.shape(), exponential.shape());
+        assert!((gamma.modulus_variance() - exponential.modulus_variance()).abs() < 1e-14);
     }
 }

@@ -25,7 +25,7 @@ impl Describe for Settings {
     }
 
     fn shape(&self) -> Shape {
-        Shape { power: 3.0, decline: None, low: f64::NEG_INFINITY, high: libm::log(self.limit_kpc) }
+        Shape { power: 3.0, decline: None, high: libm::log(self.limit_kpc) }
     }
 
     fn modulus_variance(&self) -> f64 {
