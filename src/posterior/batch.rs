@@ -7,8 +7,7 @@ use pulp::{Simd, WithSimd};
 
 use super::integrate::{Nodes, Summary, integrate};
 use super::locate::{self, Constants, PLAIN, Rule, Stars, WIDE, locate};
-use super::shape::Shape;
-use super::{BAND_OUTPUTS, MAGNITUDES_PER_LN, MODULUS_OUTPUTS, Photometry, Workspace, bands, convolve, mode};
+use super::{BAND_OUTPUTS, MAGNITUDES_PER_LN, MODULUS_OUTPUTS, Photometry, Priors, Workspace, bands, convolve, mode};
 use crate::numerics::lanes::Lanes;
 
 /// Rows taken together; large enough that rows of one class fill the lanes, small enough to stay in the first cache.
@@ -64,11 +63,9 @@ enum Column {
 
 /// One chunk.
 pub(super) struct Task<'a, 'b, 'c> {
-    pub shape: &'a Shape,
-    /// For [`PLAIN`] and [`WIDE`] care.
-    pub plain: &'a Constants,
-    pub wide: &'a Constants,
-    pub variance: f64,
+    pub priors: &'a Priors,
+    /// The prior of each row; the first one for all if not given.
+    pub which: Option<&'a [u32]>,
     pub start: usize,
     pub end: usize,
     pub parallax: &'a [f64],
@@ -88,7 +85,7 @@ impl WithSimd for Task<'_, '_, '_> {
             return self.with_simd(pulp::Scalar256b);
         }
         // a shape has a decline or an end; one with both would need two more variants here
-        match (self.shape.decline.is_some(), self.bands.is_empty()) {
+        match (self.priors.shapes[0].decline.is_some(), self.bands.is_empty()) {
             (true, true) => self.run::<S, true, false, false>(simd),
             (true, false) => self.run::<S, true, false, true>(simd),
             (false, true) => self.run::<S, false, true, false>(simd),
@@ -111,24 +108,46 @@ impl Task<'_, '_, '_> {
         let Workspace { columns, order, class, nodes, slow, .. } = self.scratch;
         columns.resize(CHUNK * (Column::Count as usize + 4 * self.bands.len()), 0.0);
         let mut columns: Vec<&mut [f64]> = columns.chunks_exact_mut(CHUNK).collect();
+        let (priors, which, parallax, error) = (self.priors, self.which, self.parallax, self.error);
+        let first = self.start;
+        let prior_of = |i: usize| match which {
+            Some(which) => (which[first + i.min(rows - 1)] as usize).min(priors.shapes.len() - 1),
+            None => 0,
+        };
+        let has_data = |row: usize| {
+            let named = which.is_none_or(|which| (which[row] as usize) < priors.shapes.len());
+            named && valid(parallax[row], error[row])
+        };
+        let rule_of = |constants: &[Constants], common: Rule<S>, group: &[u32]| {
+            if which.is_none() {
+                return common;
+            }
+            let lanes = std::array::from_fn(|k| &constants[prior_of(group[k.min(group.len() - 1)] as usize)]);
+            Rule::of_lanes(simd, lanes)
+        };
         for i in 0..padded {
             let row = self.start + i.min(rows - 1);
-            let (mut w, mut s) = (self.parallax[row], self.error[row]);
-            if !valid(w, s) {
+            let (mut w, mut s) = (parallax[row], error[row]);
+            if !has_data(row) {
                 (w, s) = (1.0, 1.0);
             }
             s = s.clamp(1e-9, 1e9).max(w * 1e-7);
             columns[Column::Signal as usize][i] = (w / s).max(-1e9);
             columns[Column::LnError as usize][i] = s;
         }
-        let plain = Rule::new(simd, self.plain);
+        let plain = Rule::new(simd, &priors.plain[0]);
         for i in (0..padded).step_by(width) {
             let at = i..i + width;
             let ln_error = Lanes::load(simd, &columns[Column::LnError as usize][at.clone()]).ln();
             ln_error.store(&mut columns[Column::LnError as usize][at.clone()]);
             let signal = Lanes::load(simd, &columns[Column::Signal as usize][at.clone()]);
             let stars = Stars { signal, ln_error };
-            let found = locate::<S, 16, DECLINE, LIMIT>(&stars, &plain, &PLAIN);
+            let mut group = [0; WIDEST];
+            for (lane, row) in group.iter_mut().enumerate() {
+                *row = (i + lane) as u32;
+            }
+            let rule = rule_of(&priors.plain, plain, &group[..width]);
+            let found = locate::<S, 16, DECLINE, LIMIT>(&stars, &rule, &PLAIN);
             found.low.store(&mut columns[Column::Low as usize][at.clone()]);
             found.high.store(&mut columns[Column::High as usize][at.clone()]);
             found.top.store(&mut columns[Column::Top as usize][at.clone()]);
@@ -137,13 +156,14 @@ impl Task<'_, '_, '_> {
         }
         order.clear();
         order.extend((0..rows as u32).filter(|&i| columns[Column::Doubtful as usize][i as usize] > 0.0));
-        let wide = Rule::new(simd, self.wide);
+        let wide = Rule::new(simd, &priors.wide[0]);
         for group in order.chunks(width) {
             let stars = Stars {
                 signal: gather(simd, columns[Column::Signal as usize], group),
                 ln_error: gather(simd, columns[Column::LnError as usize], group),
             };
-            let found = simd.vectorize(Careful::<S, DECLINE, LIMIT> { stars, rule: wide });
+            let rule = rule_of(&priors.wide, wide, group);
+            let found = simd.vectorize(Careful::<S, DECLINE, LIMIT> { stars, rule });
             for (column, lanes) in [
                 (Column::Low, found.low),
                 (Column::High, found.high),
@@ -188,10 +208,11 @@ impl Task<'_, '_, '_> {
                 let (sum, rest) = S::as_mut_simd_f64s(nodes).0.split_at_mut(count);
                 let (u, rest) = rest.split_at_mut(count);
                 let buffers = Nodes { sum, u, t: &mut rest[..count] };
+                let rule = rule_of(&priors.plain, plain, group);
                 let summary = if count <= SHORTEST {
-                    integrate::<S, DECLINE, LIMIT, BANDS, true>(&stars, &plain, low, high, top, buffers)
+                    integrate::<S, DECLINE, LIMIT, BANDS, true>(&stars, &rule, low, high, top, buffers)
                 } else {
-                    integrate::<S, DECLINE, LIMIT, BANDS, false>(&stars, &plain, low, high, top, buffers)
+                    integrate::<S, DECLINE, LIMIT, BANDS, false>(&stars, &rule, low, high, top, buffers)
                 };
                 scatter(summary.quantiles[0], columns[Column::P16 as usize], group);
                 scatter(summary.quantiles[1], columns[Column::P50 as usize], group);
@@ -233,10 +254,11 @@ impl Task<'_, '_, '_> {
             if columns[Column::Restless as usize][i] > 0.0 {
                 let [signal, ln_error, low, high] = [Column::Signal, Column::LnError, Column::Low, Column::High]
                     .map(|column| columns[column as usize][i]);
-                columns[Column::Mode as usize][i] = mode::search(self.shape, signal, ln_error, low, high);
+                columns[Column::Mode as usize][i] =
+                    mode::search(&priors.shapes[prior_of(i)], signal, ln_error, low, high);
             }
             let row = self.start + i;
-            let known = valid(self.parallax[row], self.error[row]);
+            let known = has_data(row);
             let value = |column: Column| if known { columns[column as usize][i] } else { f64::NAN };
             let modulus = |x: f64| MAGNITUDES_PER_LN * x + 10.0;
             let variance = MAGNITUDES_PER_LN * MAGNITUDES_PER_LN * value(Column::Variance).max(0.0);
@@ -247,7 +269,7 @@ impl Task<'_, '_, '_> {
                 modulus(value(Column::Mode)),
                 modulus(value(Column::Mean)),
                 if known { variance.sqrt() } else { f64::NAN },
-                if known { (variance / self.variance).min(1.0) } else { f64::NAN },
+                if known { (variance / priors.variance[prior_of(i)]).min(1.0) } else { f64::NAN },
             ];
             for (column, result) in self.out.iter_mut().zip(results) {
                 column[row] = result;
@@ -281,8 +303,8 @@ impl Task<'_, '_, '_> {
                     let [low, high, top] = [Column::Low, Column::High, Column::Top].map(|c| column(c as usize));
                     let sd = column(place + 3);
                     let guess: [Lanes<S>; 3] = std::array::from_fn(|k| column(place + k));
-                    let task =
-                        Thorough::<S, DECLINE, LIMIT> { stars, rule: plain, low, high, top, sd, guess, nodes: buffers };
+                    let rule = rule_of(&priors.plain, plain, group);
+                    let task = Thorough::<S, DECLINE, LIMIT> { stars, rule, low, high, top, sd, guess, nodes: buffers };
                     for (k, lanes) in simd.vectorize(task).into_iter().enumerate() {
                         scatter(lanes, columns[place + k], group);
                     }
@@ -292,8 +314,7 @@ impl Task<'_, '_, '_> {
             for i in 0..rows {
                 let row = self.start + i;
                 let apparent = band.apparent[row];
-                let known =
-                    valid(self.parallax[row], self.error[row]) && apparent.is_finite() && known_error(band.error[row]);
+                let known = has_data(row) && apparent.is_finite() && known_error(band.error[row]);
                 for (level, column) in out.iter_mut().enumerate() {
                     // a large modulus is a bright absolute magnitude: levels swap
                     let modulus = MAGNITUDES_PER_LN * columns[place + 2 - level][i] + 10.0;

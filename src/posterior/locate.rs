@@ -19,6 +19,7 @@
 
 use pulp::Simd;
 
+use super::batch::WIDEST;
 use super::shape::{Decline, Shape};
 use crate::numerics::lanes::Lanes;
 
@@ -92,6 +93,21 @@ impl Constants {
 }
 
 impl<S: Simd> Rule<S> {
+    /// A prior a lane.
+    #[inline(always)]
+    pub fn of_lanes(simd: S, constants: [&Constants; WIDEST]) -> Self {
+        let field = |get: fn(&Constants) -> f64| Lanes::load(simd, &constants.map(get)[..S::F64_LANES]);
+        Self {
+            power: field(|c| c.power),
+            alpha: field(|c| c.alpha),
+            ln_alpha: field(|c| c.ln_alpha),
+            ln_length: field(|c| c.ln_length),
+            ln_peak: field(|c| c.ln_peak),
+            beyond: field(|c| c.beyond),
+            high: field(|c| c.high),
+        }
+    }
+
     /// The same prior for all stars.
     #[inline(always)]
     pub fn new(simd: S, constants: &Constants) -> Self {

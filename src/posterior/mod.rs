@@ -27,7 +27,8 @@ pub mod shape;
 
 use batch::{CHUNK, Task};
 use locate::{Constants, PLAIN, WIDE};
-pub use prior::Prior;
+pub use prior::{Prior, Refusal};
+use shape::Shape;
 
 /// 5 / ln 10: magnitudes of modulus for a unit of ln d.
 pub const MAGNITUDES_PER_LN: f64 = 2.171_472_409_516_258_5;
@@ -70,6 +71,42 @@ impl Workspace {
     }
 }
 
+/// Checked priors of one kind, made ready once: a single one, or one a sky cell.
+#[derive(Debug, Clone)]
+pub struct Priors {
+    shapes: Vec<Shape>,
+    plain: Vec<Constants>,
+    wide: Vec<Constants>,
+    variance: Vec<f64>,
+}
+
+impl Priors {
+    /// Prepares priors; they must be of one kind, at least one, and each within its bounds.
+    pub fn new(priors: &[Prior]) -> Result<Self, Refusal> {
+        let Some(first) = priors.first() else {
+            return Err(("prior", "There is no prior; give at least one".into()));
+        };
+        for prior in priors {
+            prior.check()?;
+            if std::mem::discriminant(prior) != std::mem::discriminant(first) {
+                return Err(("prior", "The priors of a table are of several kinds; use one kind".into()));
+            }
+        }
+        Ok(Self::ready(priors))
+    }
+
+    fn ready(priors: &[Prior]) -> Self {
+        let shapes: Vec<Shape> = priors.iter().map(Prior::shape).collect();
+        let constants = |depth| shapes.iter().map(|shape| Constants::new(shape, depth)).collect();
+        Self {
+            plain: constants(PLAIN.depth),
+            wide: constants(WIDE.depth),
+            variance: priors.iter().map(Prior::modulus_variance).collect(),
+            shapes,
+        }
+    }
+}
+
 /// Posterior summaries of `rows` stars.
 ///
 /// `parallax` and `error` in mas and every band's columns are `rows` long; `out` holds [`MODULUS_OUTPUTS`] columns (modulus
@@ -84,27 +121,37 @@ pub fn summarise(
     out: &mut [&mut [f64]],
     scratch: &mut Workspace,
 ) {
-    let shape = prior.shape();
-    let plain = Constants::new(&shape, PLAIN.depth);
-    let wide = Constants::new(&shape, WIDE.depth);
-    let variance = prior.modulus_variance();
+    chunks(&Priors::ready(std::slice::from_ref(prior)), None, parallax, error, bands, out, scratch);
+}
+
+/// The same with a prior a row: row i takes number `which[i]` of `priors` (the sky cell it lies in, say). A number that
+/// `priors` does not hold gives NaN.
+pub fn summarise_each(
+    priors: &Priors,
+    which: &[u32],
+    parallax: &[f64],
+    error: &[f64],
+    bands: &[Photometry<'_>],
+    out: &mut [&mut [f64]],
+    scratch: &mut Workspace,
+) {
+    chunks(priors, Some(which), parallax, error, bands, out, scratch);
+}
+
+fn chunks(
+    priors: &Priors,
+    which: Option<&[u32]>,
+    parallax: &[f64],
+    error: &[f64],
+    bands: &[Photometry<'_>],
+    out: &mut [&mut [f64]],
+    scratch: &mut Workspace,
+) {
     let rows = parallax.len();
     let mut start = 0;
     while start < rows {
         let end = rows.min(start + CHUNK);
-        let task = Task {
-            shape: &shape,
-            plain: &plain,
-            wide: &wide,
-            variance,
-            start,
-            end,
-            parallax,
-            error,
-            bands,
-            out,
-            scratch,
-        };
+        let task = Task { priors, which, start, end, parallax, error, bands, out, scratch };
         if task.scratch.narrow {
             task.with_simd(pulp::Scalar256b);
         } else {

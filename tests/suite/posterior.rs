@@ -1,6 +1,8 @@
 //! The distance-modulus posterior against 40-digit arithmetic, published values, and itself (order, reflection, bits).
 
-use tenparsec::posterior::{BAND_OUTPUTS, MODULUS_OUTPUTS, Photometry, Prior, Workspace, summarise};
+use tenparsec::posterior::{
+    BAND_OUTPUTS, MODULUS_OUTPUTS, Photometry, Prior, Priors, Workspace, summarise, summarise_each,
+};
 
 /// Rows of a reference file as fields, without comments and the heading.
 fn table(text: &'static str) -> impl Iterator<Item = Vec<&'static str>> {
@@ -310,5 +312,90 @@ fn missing_input_gives_missing_output_and_nothing_else() {
             let band = *known && photometric[i] >= 0.0;
             assert!(got[MODULUS_OUTPUTS..].iter().all(|c| c[i].is_finite() == band), "{i}");
         }
+    }
+}
+
+/// Rows with priors of their own give the bits that each prior alone gives.
+#[test]
+fn a_prior_a_row_equals_each_prior_alone() {
+    let tables: [Vec<Prior>; 3] = [
+        (1..40).map(|i| Prior::ExponentiallyDecreasingDensity { length_kpc: 0.1 * f64::from(i) }).collect(),
+        (1..40)
+            .map(|i| Prior::GeneralizedGamma {
+                alpha: 0.4 + 0.05 * f64::from(i),
+                beta: 0.1 * f64::from(i),
+                length_kpc: 0.1 * f64::from(i),
+            })
+            .collect(),
+        (1..40).map(|i| Prior::UniformDensity { limit_kpc: 0.5 * f64::from(i) }).collect(),
+    ];
+    let (parallax, error, photometric) = rows(4_000, 15);
+    let which: Vec<u32> = (0..4_000).map(|i| (i * 7 + i / 13) % 40).collect();
+    let zero = vec![0.0; 4_000];
+    for table in &tables {
+        let bands = [Photometry { apparent: &zero, error: &photometric }];
+        let mut columns = vec![vec![0.0; 4_000]; MODULUS_OUTPUTS + BAND_OUTPUTS];
+        let mut out: Vec<&mut [f64]> = columns.iter_mut().map(|column| &mut column[..]).collect();
+        let priors = Priors::new(table).unwrap();
+        summarise_each(&priors, &which, &parallax, &error, &bands, &mut out, &mut Workspace::new());
+        for (k, prior) in table.iter().enumerate() {
+            let alone = run(prior, &parallax, &error, std::slice::from_ref(&photometric), &mut Workspace::new());
+            for i in (0..4_000).filter(|&i| which[i] as usize == k) {
+                assert!(columns.iter().zip(&alone).all(|(a, b)| a[i].to_bits() == b[i].to_bits()), "{prior:?} {i}");
+            }
+        }
+        // number 39 does not exist
+        assert!((0..4_000).filter(|&i| which[i] == 39).all(|i| columns.iter().all(|c| c[i].is_nan())));
+    }
+}
+
+#[test]
+fn tables_of_priors_are_checked() {
+    let good = Prior::UniformDensity { limit_kpc: 1.0 };
+    let other = Prior::ExponentiallyDecreasingDensity { length_kpc: 1.0 };
+    assert!(Priors::new(&[]).is_err());
+    assert!(Priors::new(&[good.clone(), other]).is_err());
+    assert!(Priors::new(&[good.clone(), Prior::UniformDensity { limit_kpc: f64::NAN }]).is_err());
+    assert!(Priors::new(&[good]).is_ok());
+}
+
+/// Distances drawn from the prior, then observed: the truth must fall below p16, p50 and p84 as often as they claim
+/// (simulation-based calibration, Talts et al. 2018, arXiv 1804.06788), here on the four classes that they bound.
+#[test]
+fn quantiles_cover_what_they_claim() {
+    let mut random = Uniform(31);
+    for prior in [
+        Prior::ExponentiallyDecreasingDensity { length_kpc: 1.35 },
+        Prior::GeneralizedGamma { alpha: 2.0, beta: 3.0, length_kpc: 2.0 },
+        Prior::UniformDensity { limit_kpc: 3.0 },
+    ] {
+        let count = 100_000;
+        let (mut truth, mut parallax, mut error) = (Vec::new(), Vec::new(), Vec::new());
+        for _ in 0..count {
+            let mut uniform = || 1.0 - random.next();
+            let distance = match prior {
+                Prior::ExponentiallyDecreasingDensity { length_kpc } => {
+                    -length_kpc * (uniform() * uniform() * uniform()).ln()
+                }
+                // shape (beta + 1)/alpha = 2
+                Prior::GeneralizedGamma { length_kpc, .. } => length_kpc * (-(uniform() * uniform()).ln()).sqrt(),
+                Prior::UniformDensity { limit_kpc } => limit_kpc * uniform().cbrt(),
+            };
+            let sigma = 0.02 * 50.0_f64.powf(uniform());
+            let normal = (-2.0 * uniform().ln()).sqrt() * (std::f64::consts::TAU * uniform()).cos();
+            truth.push(5.0 * distance.log10() + 10.0);
+            parallax.push(1.0 / distance + sigma * normal);
+            error.push(sigma);
+        }
+        let got = run(&prior, &parallax, &error, &[], &mut Workspace::new());
+        let mut seen = [0.0; 4];
+        for (i, mu) in truth.iter().enumerate() {
+            seen[got[..3].iter().filter(|column| column[i] < *mu).count()] += 1.0;
+        }
+        let side = 0.158_655_253_931_457_07 * f64::from(count);
+        let middle = 0.5 * f64::from(count) - side;
+        let chi2: f64 = seen.iter().zip([side, middle, middle, side]).map(|(n, e)| (n - e) * (n - e) / e).sum();
+        // 99.9 % point of chi-square with 3 degrees of freedom
+        assert!(chi2 < 16.27, "{prior:?}: {seen:?} {chi2}");
     }
 }
