@@ -10,8 +10,8 @@ use super::locate::{self, Constants, PLAIN, Rule, Stars, WIDE, locate};
 use super::{BAND_OUTPUTS, MAGNITUDES_PER_LN, MODULUS_OUTPUTS, Photometry, Priors, Workspace, bands, convolve, mode};
 use crate::numerics::lanes::Lanes;
 
-/// Rows taken together; large enough that rows of one class fill the lanes, small enough to stay in the first cache.
-pub(super) const CHUNK: usize = 512;
+/// Rows taken together; large enough that rows of one class fill the lanes, small enough to stay in the second cache.
+pub(super) const CHUNK: usize = 2048;
 /// Numbers of nodes; a row takes the smallest that suffices.
 const CLASSES: [usize; 18] = [16, 18, 20, 22, 24, 28, 32, 40, 48, 64, 96, 128, 192, 256, 384, 512, 1024, 2048];
 /// Classes up to this number of nodes try the expansion about a normal distribution.

@@ -182,7 +182,7 @@ pub(super) fn integrate<S: Simd, const DECLINE: bool, const LIMIT: bool, const B
     slopes[0] = slopes[0] - h;
     let mut delta = simd_zero;
     let mut moved = simd_zero;
-    for _ in 0..4 {
+    for _ in 0..5 {
         let mut value = slopes[6];
         let mut bend = slopes[6] * 6.0;
         for n in (0..6).rev() {

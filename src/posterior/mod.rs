@@ -1,8 +1,8 @@
 //! The posterior of the distance modulus: Gaussian parallax likelihood times a stated prior on the distance.
 //!
 //! For parallax w and error s (mas) and distance d (kpc): p(d) ~ prior(d) exp(-(w - 1/d)^2 / (2 s^2)), carried over to the
-//! modulus mu = 5 log10(d / 10 pc) (Bailer-Jones 2015, PASP 127, 994; Luri et al. 2018, A&A 616, A9). Nothing is sampled and
-//! nothing is iterated to a tolerance: quantiles, mean and standard deviation come from a trapezoidal sum over an interval
+//! modulus mu = 5 log10(d / 10 pc) (Bailer-Jones 2015, PASP 127, 994; Luri et al. 2018, A&A 616, A9). Nothing is sampled:
+//! quantiles, mean and standard deviation come from a trapezoidal sum over an interval
 //! that is found first (`locate`), with closed-form local series (`local`, `integrate`).
 //!
 //! Accuracy: 1e-6 mag or better for parallax/error from -20 to 1e6, errors from 1e-4 to 1e2 mas and lengths from 0.02 to
@@ -60,7 +60,7 @@ pub struct Workspace {
 }
 
 impl Workspace {
-    /// Empty scratch; grows on first use to about 200 kB.
+    /// Empty scratch; grows on first use to about 1 MB.
     pub fn new() -> Self {
         Self::default()
     }
