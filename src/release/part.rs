@@ -17,8 +17,10 @@ use crate::columnar::guard::{guard, io_reason, parquet_error};
 use crate::columnar::source::SourceFile;
 use crate::error::{Error, Result};
 
-/// Bytes gathered before they are hashed and written.
-const BUFFER: usize = 1 << 20;
+/// Bytes gathered before they are hashed and written. Larger writes make the kernel cache the file in larger blocks, which
+/// it finds less often among memory that was in use before: with 1 MiB the reference build spent 3.5 s of 14 in the
+/// kernel, with 128 KiB 1.0 s (a virtual machine, ext4).
+const BUFFER: usize = 128 << 10;
 
 /// A part in the making. Dropped before [`PartWriter::finish`], it removes its temporary file.
 pub struct PartWriter {
