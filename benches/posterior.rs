@@ -99,12 +99,12 @@ fn main() {
     ];
     for prior in &priors {
         for used in [0, 3] {
-            for mut scratch in [Workspace::new(), Workspace::scalar()] {
+            for (path, mut scratch) in [("vector", Workspace::new()), ("scalar", Workspace::scalar())] {
                 let mut out: Vec<&mut [f64]> = columns.iter_mut().map(|c| &mut c[..]).collect();
                 let rate = median_rate(rows, 7, || {
                     summarise(prior, &parallax, &error, &bands[..used], &mut out, &mut scratch);
                 });
-                println!("{:60} {used} bands: {:6.2} M rows/s", prior.describe(), rate / 1e6);
+                println!("{:70} {used} bands, {path}: {:6.2} M rows/s", prior.describe(), rate / 1e6);
             }
         }
     }
