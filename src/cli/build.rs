@@ -2,7 +2,7 @@
 
 use super::Resources;
 use crate::engine::build::{self, Request};
-use crate::engine::progress::Voice;
+use crate::engine::progress::{Voice, json_line};
 use crate::error::Result;
 use crate::plan::Plan;
 use clap::Args;
@@ -37,8 +37,15 @@ pub(super) fn run(options: &Options, voice: Voice, colour: bool) -> Result<u8> {
         colour,
     };
     let summary = build::run(plan, &request)?;
-    if voice == Voice::Text {
-        print!("{summary}");
+    match voice {
+        Voice::Text => print!("{summary}"),
+        Voice::Json => {
+            for note in &summary.notes {
+                json_line("warning", "note", &[("text", note.clone().into())]);
+            }
+            json_line("info", "done", &summary.figures);
+        }
+        Voice::Quiet => {}
     }
     Ok(0)
 }

@@ -8,6 +8,7 @@ use super::machine;
 use super::piece::{self, Made, Tally};
 use super::progress::{Progress, Voice, utc_now};
 use super::schedule::{self, Work};
+use super::stop::Stop;
 use super::summary::Summary;
 use crate::error::{Error, Result};
 use crate::plan::Plan;
@@ -112,10 +113,19 @@ pub fn run(plan: Plan, request: &Request) -> Result<Summary> {
         parts_folder: folder.parts()?,
         shared: Mutex::new(Shared { ledger, done }),
         progress: &progress,
+        stop: Stop::on_signals()?,
     };
     progress.watch(|| schedule::run(&build, &todo, threads, in_flight))?;
 
     let Shared { ledger, done } = build.shared.into_inner().unwrap_or_else(|poisoned| poisoned.into_inner());
+    if done.len() < job.parts.len() {
+        return Err(Error::interrupted(format!(
+            "Stopped by a signal with {} of {} parts done; run the same command again to continue.",
+            done.len(),
+            job.parts.len()
+        ))
+        .in_file(&request.output));
+    }
     let mut total = Tally::new(&job);
     let mut parts = Vec::new();
     for (_, (part, tally)) in done {
@@ -137,6 +147,7 @@ struct Build<'a> {
     parts_folder: PathBuf,
     shared: Mutex<Shared>,
     progress: &'a Progress,
+    stop: Stop,
 }
 
 struct Shared {
@@ -200,7 +211,7 @@ impl Work for Build<'_> {
     }
 
     fn stopping(&self) -> bool {
-        false
+        self.stop.asked()
     }
 }
 

@@ -3,6 +3,7 @@
 use super::build::resources;
 use super::job::Job;
 use super::machine::{show_count, show_size, show_time};
+use super::summary::plural;
 use crate::calibration::{From, Input};
 use crate::columnar::source;
 use crate::error::Result;
@@ -34,11 +35,13 @@ pub fn report(plan: Plan, output: &Path, threads: Option<usize>, memory: Option<
     line(
         "catalogue",
         format!(
-            "{} rows, {} columns, {} in {} files; {groups} row groups, the largest of {} rows",
+            "{} rows, {} columns, {} in {} {}; {groups} {}, the largest of {} rows",
             show_count(catalogue.rows),
             catalogue.schema.fields().len(),
             show_size(catalogue.bytes()),
             catalogue.files.len(),
+            plural(catalogue.files.len(), "file"),
+            plural(groups, "row group"),
             show_count(largest)
         ),
     );

@@ -12,6 +12,7 @@ pub mod pipeline;
 pub mod progress;
 pub mod schedule;
 pub mod schemas;
+pub mod stop;
 pub mod summary;
 pub mod tally;
 pub mod values;

@@ -14,7 +14,10 @@ use std::path::Path;
 pub struct Summary {
     lines: Vec<(String, String)>,
     title: String,
-    notes: Vec<String>,
+    /// Cautions, in sentences.
+    pub notes: Vec<String>,
+    /// The same as numbers, for logs.
+    pub figures: Vec<(&'static str, serde_json::Value)>,
 }
 
 fn share(part: u64, whole: u64) -> String {
@@ -76,7 +79,20 @@ impl Summary {
         let speed = show_count((rows_now as f64 / seconds) as u64);
         let memory = peak_memory().map_or(String::new(), |bytes| format!(", peak memory {}", show_size(bytes)));
         line("time", format!("{}, {speed} rows/s{memory}", show_time(seconds)));
-        Self { lines, title: manifest.title.clone(), notes: manifest.notes.clone() }
+        let figures = vec![
+            ("release", output.display().to_string().into()),
+            ("rows_in", manifest.rows_in.into()),
+            ("rows_written", manifest.rows_written.into()),
+            ("rows_dropped", manifest.rows_dropped.into()),
+            ("rows_accepted", cuts.accepted.into()),
+            ("posteriors", stars.posteriors.into()),
+            ("prior_dominated", stars.prior_dominated.into()),
+            ("parts", parts.into()),
+            ("bytes", written.into()),
+            ("seconds", ((seconds * 1e3).round() / 1e3).into()),
+            ("peak_memory_bytes", peak_memory().into()),
+        ];
+        Self { lines, title: manifest.title.clone(), notes: manifest.notes.clone(), figures }
     }
 }
 
@@ -85,7 +101,8 @@ fn values(count: u64) -> String {
     format!("{} {}", show_count(count), if count == 1 { "value" } else { "values" })
 }
 
-fn plural(count: usize, word: &str) -> String {
+/// "file" or "files".
+pub fn plural(count: usize, word: &str) -> String {
     if count == 1 { word.to_owned() } else { format!("{word}s") }
 }
 

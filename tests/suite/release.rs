@@ -238,6 +238,40 @@ fn a_killed_build_leaves_nothing_whole_and_continues_to_the_same_bytes() {
 }
 
 #[test]
+fn a_signal_stops_a_build_that_the_same_command_continues() {
+    let world = World::with_stars(&stars(200_000));
+    write(&world.path("stars.parquet"), &stars(200_000), 5000);
+    world.plan(&PLAN.replace("title = \"test\"", "title = \"test\"\nrows_per_part = 10_000"));
+    let expected = bytes_of(&world.release());
+    let mut stopped = 0;
+    for (signal, wait) in [("INT", 60), ("TERM", 90), ("INT", 120), ("TERM", 150)] {
+        std::fs::remove_dir_all(world.path("release")).unwrap();
+        let script = format!(
+            "{} build plan.toml --threads 1 & sleep 0.{wait:03}; kill -{signal} $!; wait $!",
+            env!("CARGO_BIN_EXE_tenparsec")
+        );
+        let said = crate::world::said(
+            std::process::Command::new("bash").args(["-mc", &script]).current_dir(world.folder.path()).output(),
+        );
+        if said.code == 0 {
+            continue; // it was faster than the signal
+        }
+        assert_eq!(said.code, 75, "{}", said.err);
+        if said.err.contains("continue") {
+            stopped += 1;
+            assert!(said.err.contains("of 20 parts"), "{}", said.err);
+        }
+        assert!(!world.looks_whole());
+        let leftovers = std::fs::read_dir(world.path("release/catalogue")).into_iter().flatten().flatten();
+        assert!(leftovers.into_iter().all(|file| file.path().extension().is_some_and(|e| e == "parquet")));
+        let said = world.build();
+        assert_eq!(said.code, 0, "{}", said.err);
+        assert!(bytes_of(&world.path("release")) == expected, "the continued release differs");
+    }
+    assert!(stopped > 0, "no build was stopped in the middle");
+}
+
+#[test]
 fn an_unfinished_release_of_another_plan_is_not_mixed() {
     let world = World::with_stars(&stars(20));
     std::fs::create_dir(world.path("release")).unwrap();
@@ -275,4 +309,49 @@ fn statistics_spare_decoding_but_never_change_a_count() {
     let of_early = |text: String| text.lines().find(|l| l.starts_with("early")).unwrap().to_owned();
     assert_eq!(of_early(counts(&ordered)).split(',').nth(4), of_early(counts(&shuffled)).split(',').nth(4));
     assert_eq!(rows_of(&ordered.path("release")).num_rows(), rows_of(&shuffled.path("release")).num_rows());
+}
+
+#[test]
+fn a_json_log_ends_with_the_figures() {
+    let world = World::new();
+    let said = world.run(&["build", "plan.toml", "--log", "json"]);
+    assert_eq!(said.code, 0);
+    assert!(said.out.is_empty(), "results of a JSON log go to standard error: {}", said.out);
+    let events: Vec<serde_json::Value> = said.err.lines().map(|line| serde_json::from_str(line).unwrap()).collect();
+    assert!(events.iter().all(|event| event["time"].is_string() && event["level"].is_string()));
+    let done = events.last().unwrap();
+    assert_eq!(done["event"], "done");
+    assert_eq!(done["rows_in"], 3000);
+    assert_eq!(done["rows_written"], 3000);
+}
+
+#[test]
+fn check_writes_nothing() {
+    let world = World::new();
+    let said = world.run(&["check", "plan.toml"]);
+    assert_eq!(said.code, 0, "{}", said.err);
+    assert!(said.out.contains("3,000 rows") && said.out.contains("6 row groups"), "{}", said.out);
+    assert!(!world.path("release").exists());
+}
+
+#[test]
+fn a_release_is_no_part_of_the_catalogue_beside_it() {
+    let world = World::new();
+    world.plan(&PLAN.replace("catalogue = \"stars.parquet\"", "catalogue = \".\""));
+    world.release();
+    let said = world.run(&["build", "plan.toml", "--output", "second"]);
+    assert_eq!(said.code, 0, "{}", said.err);
+    assert!(said.out.contains("3,000 rows from 1 file"), "{}", said.out);
+}
+
+#[test]
+fn a_drafted_plan_runs() {
+    let world = World::new();
+    assert_eq!(world.run(&["mock", "--rows", "3000", "--quiet", "sky"]).code, 0);
+    let draft = world.run(&["draft", "sky"]);
+    assert_eq!(draft.code, 0, "{}", draft.err);
+    assert!(draft.out.contains("keep = \"parallax_over_error > 5\""));
+    assert!(draft.err.is_empty(), "{}", draft.err);
+    world.plan(&draft.out);
+    world.release();
 }
