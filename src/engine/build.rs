@@ -73,6 +73,7 @@ pub fn resources(job: &Job, threads: Option<usize>, memory: Option<u64>) -> Resu
 pub fn run(plan: Plan, request: &Request) -> Result<Summary> {
     let start = Instant::now();
     let started = utc_now();
+    let stop = Stop::on_signals()?;
     let job = Job::new(plan, &request.output)?;
     let (threads, in_flight) = resources(&job, request.threads, request.memory)?;
     // columns that cannot be passed through are found before the output is touched
@@ -113,7 +114,7 @@ pub fn run(plan: Plan, request: &Request) -> Result<Summary> {
         parts_folder: folder.parts()?,
         shared: Mutex::new(Shared { ledger, done }),
         progress: &progress,
-        stop: Stop::on_signals()?,
+        stop,
     };
     progress.watch(|| schedule::run(&build, &todo, threads, in_flight))?;
 
