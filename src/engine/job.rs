@@ -42,6 +42,10 @@ pub struct Job {
     pub cut_groups: Vec<Vec<usize>>,
     /// Catalogue columns that must be decoded for stages, tables and the check of ids.
     pub needed: Vec<String>,
+    /// Columns that the tables need, catalogue or computed.
+    pub table_columns: Vec<String>,
+    /// Place of `prior_share` among the computed columns.
+    pub prior_share: Option<usize>,
     /// Floats in 64 bits.
     pub double: bool,
     layouts: Mutex<VecDeque<(usize, Arc<Layout>)>>,
@@ -101,11 +105,13 @@ impl Job {
             let after = columns.iter().filter_map(|c| pipeline.ready_after(c)).max().unwrap_or(0);
             cut_groups[after].push(i);
         }
+        let prior_share = declared.iter().position(|column| column.name == "prior_share");
         let recipes = fields::recipes(pipeline.stages(), &plan.document.cuts, &reads);
         let parts = catalogue.parts(release.rows_per_part);
         let mut needed: Vec<String> = Vec::new();
         let stage_columns = pipeline.loads().iter().map(|load| load.column.clone());
-        for column in stage_columns.chain(tables.columns()) {
+        let table_columns = tables.columns();
+        for column in stage_columns.chain(table_columns.iter().cloned()) {
             if catalogue.schema.field_with_name(&column).is_ok() && !needed.contains(&column) {
                 needed.push(column);
             }
@@ -121,6 +127,8 @@ impl Job {
             parts,
             cut_groups,
             needed,
+            table_columns,
+            prior_share,
             double,
             layouts: Mutex::default(),
         })

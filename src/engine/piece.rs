@@ -210,25 +210,19 @@ fn chunk(
         }
     }
     let (fails, accepted) = verdict.finish(&mut tally.cuts);
-    count_stars(job, &numbers, tally);
+    if let Some(share) = job.prior_share {
+        tally.stars.add(numbers.computed(share));
+    }
 
     let outputs = published.into_iter().enumerate();
     let mut computed: Vec<ArrayRef> =
         outputs.map(|(output, column)| column.unwrap_or_else(|| numbers.published(output))).collect();
     computed.push(Arc::new(fails));
     computed.push(Arc::new(accepted));
-    let columns = job.tables.columns();
-    let seen = view(job, &batch, &columns, &mut |output| computed[output].clone())?;
+    let seen = view(job, &batch, &job.table_columns, &mut |output| computed[output].clone())?;
     tally.tables.add(&job.tables, &seen)?;
     let passed = batch.columns()[..pass_through].iter().cloned();
     encoder.write(&passed.chain(computed).collect::<Vec<_>>())
-}
-
-fn count_stars(job: &Job, numbers: &super::pipeline::Numbers, tally: &mut Tally) {
-    let at = |name: &str| job.pipeline.outputs().iter().position(|declared| declared.name == name);
-    if let (Some(parallax), Some(share)) = (at("parallax_calibrated"), at("prior_share")) {
-        tally.stars.add(numbers.computed(parallax), numbers.computed(share));
-    }
 }
 
 /// The named columns of a chunk, from the catalogue or computed.

@@ -9,31 +9,23 @@ pub const PRIOR_DOMINATED: f64 = 0.5;
 /// Counts of stars by what could be learnt about their distance.
 #[derive(Debug, Clone, Copy, Default, PartialEq, Eq, Serialize, Deserialize)]
 pub struct StarCounts {
-    /// Rows that reached the posterior (not dropped before).
-    pub rows: u64,
     /// Rows with a posterior.
     pub posteriors: u64,
     /// Rows whose posterior is dominated by the prior; see [`PRIOR_DOMINATED`].
     pub prior_dominated: u64,
-    /// Rows whose calibrated parallax is zero or negative.
-    pub not_positive: u64,
 }
 
 impl StarCounts {
-    /// Adds a chunk from its `parallax_calibrated` and `prior_share`.
-    pub fn add(&mut self, parallax: &[f64], prior_share: &[f64]) {
-        self.rows += prior_share.len() as u64;
+    /// Adds a chunk from its `prior_share`.
+    pub fn add(&mut self, prior_share: &[f64]) {
         self.posteriors += count(prior_share, |share| !share.is_nan());
         self.prior_dominated += count(prior_share, |share| share >= PRIOR_DOMINATED);
-        self.not_positive += count(parallax, |parallax| parallax <= 0.0);
     }
 
     /// Adds the counts of other rows.
     pub fn merge(&mut self, other: &Self) {
-        self.rows += other.rows;
         self.posteriors += other.posteriors;
         self.prior_dominated += other.prior_dominated;
-        self.not_positive += other.not_positive;
     }
 }
 

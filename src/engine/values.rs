@@ -2,7 +2,7 @@
 
 use crate::calibration::Domain;
 use crate::error::{Error, Result};
-use arrow::array::{Array, ArrayRef, AsArray, Float32Array, Float64Array, PrimitiveArray};
+use arrow::array::{Array, ArrayRef, AsArray, PrimitiveArray};
 use arrow::buffer::{BooleanBuffer, NullBuffer};
 use arrow::datatypes::{
     ArrowPrimitiveType, DataType, Decimal32Type, Decimal64Type, Decimal128Type, Float16Type, Float32Type, Float64Type,
@@ -93,18 +93,34 @@ fn scaled<T: ArrowPrimitiveType>(array: &dyn Array, scale: i8, number: impl Fn(T
     all.into_iter().map(|x| if scale < 0 { x * power } else { x / power }).collect()
 }
 
-/// A computed column as it is published: 32 or 64 bits, null where it is not finite.
+/// A computed column as it is published: 32 or 64 bits, null where it is not finite in that width.
 pub fn to_array(values: &[f64], double: bool) -> ArrayRef {
-    let nulls = nulls_of(values);
     if double {
-        return Arc::new(Float64Array::new(values.to_vec().into(), nulls));
+        return published::<Float64Type>(values.to_vec(), f64::is_finite);
     }
-    let single: Vec<f32> = values.iter().map(|x| *x as f32).collect();
-    Arc::new(PrimitiveArray::<Float32Type>::new(single.into(), nulls)) as Arc<Float32Array>
+    published::<Float32Type>(values.iter().map(|x| *x as f32).collect(), f32::is_finite)
 }
 
-fn nulls_of(values: &[f64]) -> Option<NullBuffer> {
-    // a finite double beyond the range of single precision would become infinite: null as well
-    let kept = BooleanBuffer::collect_bool(values.len(), |row| (values[row] as f32).is_finite());
-    (kept.count_set_bits() < values.len()).then(|| NullBuffer::new(kept))
+fn published<T: ArrowPrimitiveType>(values: Vec<T::Native>, finite: impl Fn(T::Native) -> bool) -> ArrayRef {
+    // not short-circuiting, so that the loop vectorises; most columns of a chunk have nothing missing
+    let nulls = if values.iter().fold(true, |all, x| all & finite(*x)) {
+        None
+    } else {
+        Some(NullBuffer::new(BooleanBuffer::collect_bool(values.len(), |row| finite(values[row]))))
+    };
+    Arc::new(PrimitiveArray::<T>::new(values.into(), nulls))
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn what_is_not_finite_in_its_width_is_null() {
+        let values = [1.5, f64::NAN, f64::INFINITY, 1e300];
+        let nulls = |double| (0..4).map(|row| to_array(&values, double).is_null(row)).collect::<Vec<_>>();
+        assert_eq!(nulls(false), [false, true, true, true]);
+        assert_eq!(nulls(true), [false, true, true, false]);
+        assert_eq!(to_array(&values[..1], false).null_count(), 0);
+    }
 }
